@@ -1,0 +1,253 @@
+"""Damped Newton for many small systems at once, with exact derivatives.
+
+One system a heat; all heats of a chunk go through the same array operations. A heat that is
+solved leaves the chunk; a heat that cannot be solved says so and does not touch its
+neighbours. Between two Jacobians the factors of the last one are used again while they
+still pay (Shamanskii's modification, Ukrain. Mat. Zh. 19 (1967) 118; from memory).
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+
+from converter_calc.basis import dual as ad
+from converter_calc.basis.dual import Array, Num
+from converter_calc.basis.tolerances import (
+    MOST_HALVINGS,
+    MOST_STEPS,
+    RESIDUAL,
+    RESIDUAL_STALLED,
+)
+
+Unknowns = dict[str, Array]
+#: residual(selection, unknowns) -> residuals, one a closure, in order.
+Residual = Callable[[Any, Mapping[str, Num]], Sequence[Num]]
+Matrix = list[list[Any]]
+
+
+@dataclass(frozen=True)
+class Reach:
+    """How far one step may move an unknown: absolute, as a share, and hard bounds."""
+
+    step: float = np.inf
+    share: float = np.inf
+    low: float = -np.inf
+    high: float = np.inf
+
+
+@dataclass
+class Solved:
+    """Unknowns of n heats with their convergence: residual norm and number of Jacobians."""
+
+    unknowns: Unknowns
+    residual: Array
+    steps: Array
+    converged: Any
+
+
+def _is_zero(a: Any) -> bool:
+    return isinstance(a, float) and a == 0.0
+
+
+def factorise(J: Matrix) -> tuple[Matrix, list[Any], Any]:
+    """LU factors without exchange of rows, over arrays of heats.
+
+    Entries that are the number 0.0 are skipped. Returns (factors, inverse pivots, trouble)
+    where trouble marks heats whose pivot is too small to trust.
+    """
+    k = len(J)
+    A = [row[:] for row in J]
+    inverse: list[Any] = []
+    trouble: Any = False
+    for c in range(k):
+        pivot = A[c][c]
+        size = sum(np.abs(entry) for entry in J[c])
+        trouble = trouble | ~(np.abs(pivot) > 1e-10 * size)
+        inverse.append(1.0 / pivot if not _is_zero(pivot) else np.inf)
+        for r in range(c + 1, k):
+            if _is_zero(A[r][c]):
+                continue
+            factor = A[r][c] * inverse[c]
+            A[r][c] = factor
+            for j in range(c + 1, k):
+                if not _is_zero(A[c][j]):
+                    A[r][j] = A[r][j] - factor * A[c][j]
+    return A, inverse, trouble
+
+
+def substitute(A: Matrix, inverse: Sequence[Any], rhs: Sequence[Any]) -> list[Any]:
+    """Solution of the factored systems for one right-hand side a heat."""
+    k = len(rhs)
+    y = list(rhs)
+    for r in range(1, k):
+        for c in range(r):
+            if not _is_zero(A[r][c]):
+                y[r] = y[r] - A[r][c] * y[c]
+    for r in range(k - 1, -1, -1):
+        for c in range(r + 1, k):
+            if not _is_zero(A[r][c]):
+                y[r] = y[r] - A[r][c] * y[c]
+        y[r] = y[r] * inverse[r]
+    return y
+
+
+def dense(J: Matrix, n: int) -> Array:
+    """The Jacobian as an array (n, k, k)."""
+    k = len(J)
+    full = np.zeros((n, k, k))
+    for r in range(k):
+        for c in range(k):
+            full[:, r, c] = J[r][c]
+    return full
+
+
+def jacobian(residuals: Sequence[Num], names: Sequence[str]) -> Matrix:
+    """Derivative of each residual by each unknown."""
+    return [[ad.slope(residual, name) for name in names] for residual in residuals]
+
+
+def _norm(residuals: Sequence[Any]) -> Array:
+    size = np.abs(residuals[0])
+    for residual in residuals[1:]:
+        size = np.maximum(size, np.abs(residual))
+    return np.asarray(np.where(np.isfinite(size), size, np.inf))
+
+
+def newton_step(residuals: Sequence[Num], names: Sequence[str], n: int) -> tuple[list[Any], Any]:
+    """Full Newton step of n heats: (step a unknown, function that solves again)."""
+    J = jacobian(residuals, names)
+    A, inverse, trouble = factorise(J)
+    rhs = [-ad.value(residual) for residual in residuals]
+    step = substitute(A, inverse, rhs)
+    bad = np.flatnonzero(np.broadcast_to(trouble, (n,)))
+    if bad.size:
+        full = dense(J, n)[bad]
+        right = np.stack([np.broadcast_to(part, (n,))[bad] for part in rhs], axis=1)
+        fixed = _solve_dense(full, right)
+        step = [np.array(np.broadcast_to(part, (n,))) for part in step]
+        for c in range(len(step)):
+            step[c][bad] = fixed[:, c]
+    return step, (A, inverse)
+
+
+def _solve_dense(full: Array, right: Array) -> Array:
+    """Least-squares solution, which also stands where a Jacobian is singular."""
+    full = np.nan_to_num(full, posinf=0.0, neginf=0.0)
+    right = np.nan_to_num(right, posinf=0.0, neginf=0.0)
+    inverse = np.linalg.pinv(full, rcond=1e-13)
+    return np.asarray(np.einsum("nij,nj->ni", inverse, right))
+
+
+def _damping(x: Unknowns, step: Sequence[Any], reach: Mapping[str, Reach]) -> Array:
+    """Largest share of the step, at most one, that respects every reach."""
+    names = list(x)
+    n = x[names[0]].shape[0]
+    share = np.ones(n)
+    for name, move in zip(names, step, strict=True):
+        limit = reach.get(name)
+        if limit is None:
+            continue
+        size = np.abs(move) + 1e-300
+        if np.isfinite(limit.step):
+            share = np.minimum(share, limit.step / size)
+        if np.isfinite(limit.share):
+            share = np.minimum(share, limit.share * np.abs(x[name]) / size)
+        if np.isfinite(limit.low):
+            room = np.where(move < 0.0, 0.9 * (x[name] - limit.low) / size, 1.0)
+            share = np.minimum(share, room)
+        if np.isfinite(limit.high):
+            room = np.where(move > 0.0, 0.9 * (limit.high - x[name]) / size, 1.0)
+            share = np.minimum(share, room)
+    return share
+
+
+def solve(
+    residual: Residual, start: Unknowns, reach: Mapping[str, Reach], indices: Array
+) -> Solved:
+    """Solve n systems of equal shape.
+
+    Parameters
+    ----------
+    residual : called with the indices of the heats still unsolved and their unknowns.
+    start : first guess, arrays (n,). reach : limits of a step. indices : heats, (n,) ints.
+
+    Returns
+    -------
+    Solved, in the order of `indices`. Nothing is raised for a heat that does not converge.
+    """
+    names = list(start)
+    n = len(indices)
+    answer = {name: np.array(start[name], dtype=float) for name in names}
+    norm_of, steps_of = np.full(n, np.inf), np.zeros(n, dtype=int)
+    active = np.arange(n)
+    x = {name: answer[name].copy() for name in names}
+    with np.errstate(all="ignore"):
+        for _ in range(MOST_STEPS):
+            if not active.size:
+                break
+            here = indices[active]
+            duals = residual(here, {name: ad.seed(x[name], name) for name in names})
+            norm = _norm([np.broadcast_to(ad.value(r), active.shape) for r in duals])
+            steps_of[active] += 1
+            step, factors = newton_step(duals, names, active.size)
+            x, norm = _advance(residual, here, x, step, norm, reach, factors)
+            for name in names:
+                answer[name][active] = x[name]
+            stalled = norm >= norm_of[active]
+            norm_of[active] = norm
+            done = (norm <= RESIDUAL) | ((norm <= RESIDUAL_STALLED) & stalled)
+            if done.any():
+                active = active[~done]
+                x = {name: x[name][~done] for name in names}
+    return Solved(answer, norm_of, steps_of, norm_of <= RESIDUAL_STALLED)
+
+
+def _advance(
+    residual: Residual,
+    here: Array,
+    x: Unknowns,
+    step: Sequence[Any],
+    norm: Array,
+    reach: Mapping[str, Reach],
+    factors: Any,
+) -> tuple[Unknowns, Array]:
+    """Take the step, shortened where it does not help, then reuse the factors while it pays."""
+    names = list(x)
+    share = _damping(x, step, reach)
+    new = {name: x[name] + share * move for name, move in zip(names, step, strict=True)}
+    parts = residual(here, new)
+    size = _norm([np.broadcast_to(part, here.shape) for part in parts])
+    for _ in range(MOST_HALVINGS):
+        worse = np.flatnonzero(size > norm)
+        if not worse.size:
+            break
+        share[worse] *= 0.5
+        some = {
+            name: x[name][worse] + share[worse] * np.broadcast_to(move, here.shape)[worse]
+            for name, move in zip(names, step, strict=True)
+        }
+        again = residual(here[worse], some)
+        size[worse] = _norm([np.broadcast_to(part, worse.shape) for part in again])
+        for name in names:
+            new[name][worse] = some[name]
+        parts = [np.array(np.broadcast_to(part, here.shape)) for part in parts]
+        for old, part in zip(parts, again, strict=True):
+            old[worse] = part
+    for _ in range(2):
+        if not (size > RESIDUAL).any():
+            break
+        move = substitute(*factors, [-part for part in parts])
+        trial = {name: new[name] + d for name, d in zip(names, move, strict=True)}
+        further = residual(here, trial)
+        reached = _norm([np.broadcast_to(part, here.shape) for part in further])
+        better = reached < 0.3 * size
+        if not better.any():
+            break
+        new = {name: np.where(better, trial[name], new[name]) for name in names}
+        size = np.where(better, reached, size)
+        parts = [np.where(better, a, b) for a, b in zip(further, parts, strict=True)]
+    return new, size

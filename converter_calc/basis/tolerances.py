@@ -1,0 +1,20 @@
+"""Every numerical tolerance of the package, each with its reason."""
+
+from __future__ import annotations
+
+#: Largest dimensionless residual of a solved heat. Rounding leaves about 1e-14; closures
+#: are promised to 1e-9, so this leaves three orders for the scaling of small elements.
+RESIDUAL = 1e-12
+#: A heat that stalls above RESIDUAL through rounding still counts as solved below this.
+RESIDUAL_STALLED = 1e-10
+#: Promised closure of each element and of energy, relative.
+CLOSURE = 1e-9
+#: Newton steps before a heat is given up. Ordinary heats need 5 to 8.
+MOST_STEPS = 60
+#: Halvings of one Newton step before it is taken all the same.
+MOST_HALVINGS = 6
+#: Heats solved together: few enough for the arrays to stay in cache, many enough to make
+#: the cost of a numpy call (about 0.5 microseconds) small beside its work.
+CHUNK = 4096
+#: Width at which the two sides of a complementarity condition meet, dimensionless.
+CORNER = 1e-8

@@ -1,0 +1,31 @@
+"""Grades, the converter aims derived from them, and tramp limits: the names to import."""
+
+from converter_calc.planning.aims import ConverterAim, Term, converter_aim, ladle_targets
+from converter_calc.planning.grade_library import Grade, Limit, grade, grades, parse_user_grade
+from converter_calc.planning.tap_practice import Addition, TapPractice, additions, tap_practice
+from converter_calc.planning.tramp import (
+    TrampCheck,
+    largest_fitting_share,
+    tell_tramp,
+    worst_element,
+)
+
+__all__ = [
+    "Addition",
+    "ConverterAim",
+    "Grade",
+    "Limit",
+    "TapPractice",
+    "Term",
+    "TrampCheck",
+    "additions",
+    "converter_aim",
+    "grade",
+    "grades",
+    "ladle_targets",
+    "largest_fitting_share",
+    "parse_user_grade",
+    "tap_practice",
+    "tell_tramp",
+    "worst_element",
+]
