@@ -11,8 +11,8 @@ import math
 
 import numpy as np
 import pytest
-from converter_calc.basis.errors import InfeasibleError, InputError
 
+from converter_calc.basis.errors import InfeasibleError, InputError
 from converter_calc.data.tables import read_csv_rows, read_toml
 from converter_calc.planning.grades import (
     ConverterAim,
@@ -308,11 +308,15 @@ def test_table_of_heats_equals_the_loop() -> None:
     scrap = rng.uniform(0.0, 6e4, 50)
     scrap[0] = 0.0
     limits = {"Cu": 0.04, "Sn": 0.002}
-    table = largest_fitting_share(ANALYSES, mix, scrap, 2e5, 0.9, limits)
+    stays, hm = rng.uniform(0.5, 1.0, 50), rng.uniform(0.0, 0.02, 50)
+    table = largest_fitting_share(
+        ANALYSES, mix, scrap, 2e5, 0.9, limits, {"Cu": hm}, {"Sn": stays, "Cu": stays}
+    )
     for k in range(50):
         one = largest_fitting_share(
-            ANALYSES, {s: v[k] for s, v in mix.items()}, scrap[k], 2e5, 0.9, limits
-        )
+            ANALYSES, {s: v[k] for s, v in mix.items()}, scrap[k], 2e5, 0.9, limits,
+            {"Cu": hm[k]}, {"Sn": stays[k], "Cu": stays[k]},
+        )  # fmt: skip
         for many, single in zip(table, one, strict=True):
             assert many.offender[k] == single.offender[0]
             for name in ("steel_pct", "breaks", "fitting_share", "fitting_scrap_share"):
@@ -348,6 +352,23 @@ def test_others_alone_may_break_the_limit() -> None:
     assert "the others alone break the limit" in tell_tramp(check)
     hot = largest_fitting_share(ANALYSES, mix, 5e4, 1e5, 0.9, {"Cu": 0.01}, {"Cu": 0.4})
     assert hot[0].fitting_scrap_share[0] == 0.0
+
+
+def test_nothing_that_stays_breaks_nothing_and_nan_and_empty_pass() -> None:
+    """Contract."""
+    mix, limit = {"shredded": 1.0}, {"Cu": 0.01}
+    (gone,) = largest_fitting_share(ANALYSES, mix, 2e4, 1e5, 0.9, limit, stays_share={"Cu": 0.0})
+    assert not gone.breaks[0]
+    (half,) = largest_fitting_share(ANALYSES, mix, [2e4, np.nan], 1e5, 0.9, limit)
+    assert half.breaks.tolist() == [True, False]
+    (none,) = largest_fitting_share(ANALYSES, mix, np.empty(0), 1e5, 0.9, limit)
+    assert none.steel_pct.shape == (0,)
+    (two,) = largest_fitting_share(
+        ANALYSES, mix, 2e4, 1e5, 0.9, limit, stays_share={"Cu": np.array([0.0, 1.0])}
+    )
+    assert two.breaks.tolist() == [False, True]
+    assert two.offender == ["shredded"] * 2
+    assert none.offender == []
 
 
 def test_oxidised_share_counts() -> None:

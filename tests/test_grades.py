@@ -9,9 +9,9 @@ and refusals promised to the user; "guard" = shape of our own tables.
 from __future__ import annotations
 
 import pytest
+
 from converter_calc.basis.elements import atomic_weight
 from converter_calc.basis.errors import DataError, InputError
-
 from converter_calc.data.tables import read_csv_rows, read_toml
 from converter_calc.planning.grades import (
     Grade,

@@ -25,14 +25,12 @@ def test_product_at_one_atmosphere():
 
 def test_oxygen_satisfies_the_equilibrium():
     """Definition: K a_C a_O = p_CO with the printed interaction coefficients, written out here
-    (log of the mass action law; JSPS 1988, from memory). Saturation moves [O] by under 2e-6."""
+    (log of the mass action law; JSPS 1988, from memory). Saturation moves log [O] by under 1e-6."""
     C, T_K = np.meshgrid(np.geomspace(0.02, 1.0, 40), np.linspace(1820.0, 2020.0, 9))
-    O = carbon_oxygen.dissolved_oxygen_pct("jsps_1988", C, T_K, 1.0)
-    log_f = 0.243 * C - 0.32 * O - 0.17 * O - 0.421 * C
-    miss = 1160 / T_K + 2.003 + np.log10(C * O) + log_f
-    assert np.max(np.abs(miss)) < 2e-6
-    far = O < 0.2 * carbon_oxygen.saturated_oxygen_pct(T_K)
-    assert np.max(np.abs(miss[far])) < 3e-7
+    oxygen = carbon_oxygen.dissolved_oxygen_pct("jsps_1988", C, T_K, 1.0)
+    log_f = 0.243 * C - 0.32 * oxygen - 0.17 * oxygen - 0.421 * C
+    miss = 1160 / T_K + 2.003 + np.log10(C * oxygen) + log_f
+    assert np.max(np.abs(miss)) < 1e-6
 
 
 def test_implicit_root_is_solved_to_rounding():
@@ -64,16 +62,16 @@ def test_turkdogan_printed_constants():
     (bottom) for C < 0.05."""
     C = np.array([0.02, 0.03, 0.05])
     for blowing, value in {"top": 135.0, "combined": 135.0, "bottom": 80.0}.items():
-        O = carbon_oxygen.dissolved_oxygen_pct("turkdogan_1996", C, T_1650, None, blowing)
-        assert 1e4 * O * np.sqrt(C) == pytest.approx(value, abs=0.01)
+        oxygen = carbon_oxygen.dissolved_oxygen_pct("turkdogan_1996", C, T_1650, None, blowing)
+        assert 1e4 * oxygen * np.sqrt(C) == pytest.approx(value, abs=0.01)
 
 
 def test_two_laws_agree_at_turndown():
     """jsps_1988 with the products of practice against Turkdogan 1996 (another source): at 0.03
-    to 0.05 % C they differ by up to 38 % top, 24 % combined and 13 % bottom (dissolved oxygen
-    by the product runs as 1/C, by Turkdogan as 1/sqrt(C))."""
+    to 0.05 % C they differ by up to 55 % top, 20 % combined and 28 % bottom (the product makes
+    dissolved oxygen run as 1/C, Turkdogan as 1/sqrt(C))."""
     C = np.array([0.03, 0.04, 0.05])
-    for blowing, bound in {"top": 0.6, "combined": 0.25, "bottom": 0.4}.items():
+    for blowing, bound in {"top": 0.56, "combined": 0.21, "bottom": 0.29}.items():
         a, b = (
             carbon_oxygen.dissolved_oxygen_pct(law, C, T_1650, None, blowing)
             for law in ("jsps_1988", "turkdogan_1996")
@@ -94,10 +92,10 @@ def test_saturated_oxygen_published():
 def test_oxygen_falls_with_carbon_and_stays_below_saturation(law, blowing):
     """Property; also finite at no carbon at all."""
     C = np.concatenate([[0.0], np.geomspace(1e-4, 1.0, 100)])
-    O = carbon_oxygen.dissolved_oxygen_pct(law, C, T_1650, None, blowing)
-    assert np.all(np.diff(O) < 1e-9 * O[0])
-    assert np.all(np.diff(O[C > 0.02]) < 0.0)
-    assert np.all((O > 0.0) & (O < carbon_oxygen.saturated_oxygen_pct(T_1650)))
+    oxygen = carbon_oxygen.dissolved_oxygen_pct(law, C, T_1650, None, blowing)
+    assert np.all(np.diff(oxygen) < 1e-9 * oxygen[0])
+    assert np.all(np.diff(oxygen[C > 0.02]) < 0.0)
+    assert np.all((oxygen > 0.0) & (oxygen < carbon_oxygen.saturated_oxygen_pct(T_1650)))
 
 
 def test_pressure_given_missing_or_mixed():
@@ -140,7 +138,7 @@ def test_iron_oxide_table_as_given():
 def test_iron_oxide_with_temperature_carbon_and_factor():
     """Common practice, no source: +1 % T.Fe per 15 to 20 K; falls with carbon; finite at 0."""
     rise = iron_oxide.total_iron_pct(0.05, T_1650 + 100) - iron_oxide.total_iron_pct(0.05, T_1650)
-    assert 100 / 20 < rise < 100 / 15
+    assert rise == pytest.approx(100 / 17.5, rel=1e-4)
     C = np.concatenate([[0.0], np.geomspace(1e-3, 4.5, 60)])
     for blowing in BLOWING:
         iron = iron_oxide.total_iron_pct(C, T_1650, blowing)
@@ -148,7 +146,7 @@ def test_iron_oxide_with_temperature_carbon_and_factor():
         assert np.all((iron > 0.0) & (iron < 70.0))
     twice = iron_oxide.total_iron_pct(0.05, T_1650, "top", 2.0)
     assert twice == pytest.approx(2.0 * iron_oxide.total_iron_pct(0.05, T_1650, "top"))
-    assert 15.0 <= iron_oxide.ferric_share_pct() <= 35.0
+    assert 15.0 < iron_oxide.ferric_share_pct() < 35.0
 
 
 def test_magnesia_fit():
@@ -161,6 +159,11 @@ def test_magnesia_fit():
     assert np.max(np.abs(got - table)) < 0.50
     assert np.max(np.abs(got - table)[:, B >= 2.0]) < 0.31
     assert got[1, 5] == pytest.approx(6.4, abs=0.05)  # B 3.5 at 1650 C
+    fall = np.exp(-B / read_toml("magnesia.toml")["fit"]["B_scale"])[None, :] + 0.0 * table
+    dT = (temp - 1650.0)[:, None] + 0.0 * table
+    terms = np.stack([np.ones_like(table), fall, dT, dT * fall], axis=-1).reshape(-1, 4)
+    refit = terms @ np.linalg.lstsq(terms, table.ravel(), rcond=None)[0]
+    assert got.ravel() == pytest.approx(refit, abs=1e-3)  # the fit as claimed
     assert np.all(np.diff(got, axis=1) < 0.0)
     assert np.all(np.diff(got, axis=0) > 0.0)
 

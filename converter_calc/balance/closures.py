@@ -65,7 +65,7 @@ def magnesia_aim_pct(p: Problem, s: State) -> Num:
     """(%MgO) wanted: the aim, else saturation at the end of the blow times a factor."""
 
     def saturation() -> Num:
-        sat = magnesia.saturation_pct(s.basicity, s.T_K)
+        sat = magnesia.saturation_pct(s.liquid_basicity, s.T_K)
         return sat * p.values["MgO_saturation_factor"]
 
     aim = p.get("aim_MgO_pct")

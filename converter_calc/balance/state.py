@@ -75,7 +75,12 @@ class State:
 
     @property
     def basicity(self) -> Num:
-        """CaO/SiO2 of the liquid slag by mass, lime as analysed."""
+        """CaO/SiO2 by mass of the slag as a sample shows it, undissolved lime included."""
+        return self.liquid_basicity + self.undissolved_kg / self.slag_species_kg["SiO2"]
+
+    @property
+    def liquid_basicity(self) -> Num:
+        """CaO/SiO2 of the liquid slag by mass, CaS counted as the lime it was."""
         return self.slag_pct["CaO"] / self.slag_pct["SiO2"]
 
 

@@ -32,7 +32,7 @@ def laws() -> list[str]:
 def describe(law: str) -> LawNote:
     """Formula text, source and range of a law. Raises DataError: unknown law."""
     row = pick(_rows(), law, "carbon-oxygen law")
-    return read_note(row, row["formula"])
+    return read_note(row, row["formula"].format_map(row))
 
 
 def blowing_kinds() -> list[str]:
@@ -109,6 +109,11 @@ def _effective_carbon(C_pct: Num) -> Num:
     return ad.sqrt(ad.square(C_pct) + floor * floor)
 
 
+def _limited(free: Num, limit: Num, corner: float) -> Num:
+    """Smooth minimum, rounded in proportion to the smaller of the two."""
+    return ad.smooth_min(free, limit, free * limit / (free + limit) * corner)
+
+
 def _jsps(row: Mapping[str, Any], carbon: Num, T_K: Num, p_CO: Num, corner: float) -> Num:
     """[O] = A 10^(b [O]); A limited to the value that belongs to saturation."""
     by_carbon = -(row["e_C_C"] + row["e_O_C"]) * LN10
@@ -117,7 +122,7 @@ def _jsps(row: Mapping[str, Any], carbon: Num, T_K: Num, p_CO: Num, corner: floa
     free = ad.exp(exponent) * p_CO / carbon
     saturated = saturated_oxygen_pct(T_K)
     limit = saturated * ad.exp(saturated * -by_oxygen)
-    return _smallest_root(ad.smooth_min(free, limit, limit * corner) * by_oxygen) / by_oxygen
+    return _smallest_root(_limited(free, limit, corner) * by_oxygen) / by_oxygen
 
 
 def dissolved_oxygen_pct(
@@ -137,8 +142,8 @@ def dissolved_oxygen_pct(
     Returns
     -------
     Num. jsps_1988 solves [%O] f_O [%C] f_C = p_CO / K with f from first-order interaction.
-    Saturation is a smooth minimum whose corner is 0.1 % of it wide, which moves [O] by less
-    than 1e-5 of itself while it stays below 90 % of saturation.
+    Saturation is a smooth minimum whose corner is 0.05 % of it wide, which moves [O] by less
+    than 2e-6 of itself while it stays below 90 % of saturation.
 
     Raises
     ------
@@ -159,7 +164,7 @@ def dissolved_oxygen_pct(
         pick(dict.fromkeys(blowing_kinds()), blowing, "way of blowing")
         free = row[blowing] * 1e-4 / ad.sqrt(carbon)
     saturated = saturated_oxygen_pct(T_K)
-    return ad.smooth_min(free, saturated, saturated * corner)
+    return _limited(free, saturated, corner)
 
 
 def out_of_range(law: str, C_pct: Num, T_K: Num) -> list[Outside]:

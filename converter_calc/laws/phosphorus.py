@@ -124,6 +124,8 @@ def partition_ratio(law: str, slag_pct: Mapping[str, Num], T_K: Num, C_pct: Num,
     Source: of each law in its data row, see `describe`; ranges in `out_of_range`.
     """
     row = pick(_table(), law, "phosphorus law")
+    if row.left_side == QUINTIC:
+        slag_pct = {**slag_pct, "FetO": FetO_pct(slag_pct)}
     exponent = row.per_T / T_K + row.constant
     if row.linear:
         exponent = exponent + weighted_sum(row.linear, slag_pct)
@@ -138,7 +140,7 @@ def partition_ratio(law: str, slag_pct: Mapping[str, Num], T_K: Num, C_pct: Num,
     if row.left_side == OXYGEN:
         return base * _power_two_and_a_half(O_pct)
     if row.left_side == QUINTIC:
-        FetO = FetO_pct(slag_pct)
+        FetO = slag_pct["FetO"]
         root = ad.sqrt(FetO * slag_pct.get("P2O5", 0.0) + TINY_PHOSPHATE)
         return base * (ad.square(FetO) * root * share_of("P", "P2O5"))
     return base

@@ -48,7 +48,7 @@ def FetO_pct(slag_pct: Mapping[str, Num]) -> Num:
 
 
 def weighted_sum(terms: Iterable[tuple[str, float]], slag_pct: Mapping[str, Num]) -> Num:
-    """Sum of coefficient x (%oxide) over the oxides present; "FetO" is worked out.
+    """Sum of coefficient x (%oxide) over the oxides present; "FetO" is worked out if absent.
 
     Parameters
     ----------
@@ -60,7 +60,9 @@ def weighted_sum(terms: Iterable[tuple[str, float]], slag_pct: Mapping[str, Num]
     """
     total: Num = None
     for oxide, coefficient in terms:
-        pct = FetO_pct(slag_pct) if oxide == "FetO" else slag_pct.get(oxide)
+        pct = slag_pct.get(oxide)
+        if pct is None and oxide == "FetO":
+            pct = FetO_pct(slag_pct)
         if pct is not None:
             term = pct * coefficient
             total = term if total is None else total + term

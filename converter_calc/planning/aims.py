@@ -106,7 +106,7 @@ def converter_aim(grade: Grade, practice: TapPractice) -> ConverterAim:
     C_pct, needs_vacuum = _carbon(target_C, tap, grade, practice, terms, notes)
     P_pct = _residue("P", tap, grade, practice, terms, notes)
     S_pct = _residue("S", tap, grade, practice, terms, notes)
-    _tell_excess(tap, grade, practice, notes)
+    _tell_excess(tap, grade, notes)
     return ConverterAim(
         C_pct=C_pct,
         P_pct=P_pct,
@@ -349,7 +349,7 @@ def _manganese(tap: _Tap, grade: Grade, practice: TapPractice, terms: list[Term]
     return aim
 
 
-def _tell_excess(tap: _Tap, grade: Grade, practice: TapPractice, notes: list[str]) -> None:
+def _tell_excess(tap: _Tap, grade: Grade, notes: list[str]) -> None:
     """Note each element that the additions alone carry over its maximum."""
     for element, (_, high) in grade.limits.items():
         if high is None or element in {"C", "P", "S"}:

@@ -83,7 +83,7 @@ def _end_point(outcome: Outcome) -> list[Caution]:
 
 def _slag(outcome: Outcome) -> list[Caution]:
     p, s = outcome.p, outcome.state
-    sat = magnesia.saturation_pct(s.basicity, s.T_K)
+    sat = magnesia.saturation_pct(s.liquid_basicity, s.T_K)
     undissolved = 100.0 * s.undissolved_kg / s.slag_kg
     MgO = s.slag_pct.get("MgO", 0.0)
     lime_bound = outcome.ask.lime

@@ -243,15 +243,15 @@ class Outcome:
             for stream in self.streams
             if float(at(stream.mass_kg, index)) != 0.0
         ]
-        balance = {
-            name: {
-                "in": plain(closure.inflow),
-                "out": plain(closure.outflow),
+        balance: dict[str, Any] = {"elements": {}}
+        for name, closure in self.closures.items():
+            unit = "MJ" if name == "energy" else "kg"
+            entry = {
+                f"in_{unit}": plain(closure.inflow),
+                f"out_{unit}": plain(closure.outflow),
                 "relative_closure": plain(closure.relative),
             }
-            for name, closure in self.closures.items()
-        }
-        energy = balance.pop("energy")
+            (balance if name == "energy" else balance["elements"])[name] = entry
         return {
             "heat_id": self.heats.ids[index],
             "status": self.status[index],
@@ -260,7 +260,7 @@ class Outcome:
             "streams": streams,
             "heat_loss_MJ": plain(self.state.heat_loss_J) / MJ,
             "heat_input_MJ": plain(self.heat_input_MJ()),
-            "balance": {"elements_kg": balance, "energy_MJ": energy},
+            "balance": balance,
             "laws": {
                 "chosen": dict(self.p.laws) | {"iron_oxide": self.p.blowing},
                 "values": plain(self.state.laws),

@@ -56,12 +56,13 @@ def largest_fitting_share(
     yield_share: Any,
     tramp_max: Mapping[str, float],
     rest_pct: Mapping[str, Any] | None = None,
-    stays_share: Mapping[str, float] | None = None,
+    stays_share: Mapping[str, Any] | None = None,
 ) -> list[TrampCheck]:
     """Check each tramp element of a mix and find the share that would fit.
 
     Steel content = stays * (scrap_kg * sum_s x_s c_s + (charge - scrap) * c_rest)
-    / (charge * yield), linear in the share x_s, so that the fitting share is exact.
+    / (charge * yield), linear in the share x_s, so that the fitting share is exact. A heat with
+    a NaN is not said to break a limit.
 
     Parameters
     ----------
@@ -71,7 +72,7 @@ def largest_fitting_share(
     yield_share : steel per kg of metallic charge [kg/kg], above 0; number or (n,).
     tramp_max : element -> limit in the steel [mass %].
     rest_pct : element -> content of the rest of the charge, the hot metal [mass %].
-    stays_share : element -> share that is left in the steel, 0..1; absent = 1.
+    stays_share : element -> share that is left in the steel, 0..1; number or (n,); absent = 1.
 
     Returns
     -------
@@ -83,18 +84,22 @@ def largest_fitting_share(
     """
     names = list(mix_share)
     _check_mix(names, scrap_pct, mix_share)
-    n_arrays = [np.atleast_1d(np.asarray(x, dtype=float)) for x in mix_share.values()]
-    scrap, charge, steel_yield = (
-        np.atleast_1d(np.asarray(x, dtype=float))
-        for x in (scrap_kg, metallic_charge_kg, yield_share)
+    columns = [*mix_share.values(), scrap_kg, metallic_charge_kg, yield_share]
+    per_element = [
+        (given or {}).get(element, absent)
+        for given, absent in ((rest_pct, 0.0), (stays_share, 1.0))
+        for element in tramp_max
+    ]
+    arrays = np.broadcast_arrays(
+        *(np.atleast_1d(np.asarray(x, dtype=float)) for x in [*columns, *per_element])
     )
-    *shares, scrap, charge, steel_yield = np.broadcast_arrays(*n_arrays, scrap, charge, steel_yield)
-    x = np.stack(shares)
+    m, k = len(names), len(tramp_max)
+    x = np.stack(arrays[:m])
+    scrap, charge, steel_yield = arrays[m : m + 3]
+    rests, stay = arrays[m + 3 : m + 3 + k], arrays[m + 3 + k :]
     checks = []
-    for element, limit in tramp_max.items():
+    for (element, limit), rest, stays in zip(tramp_max.items(), rests, stay, strict=True):
         content = np.array([scrap_pct[name].get(element, 0.0) for name in names])
-        rest = np.asarray((rest_pct or {}).get(element, 0.0), dtype=float)
-        stays = (stays_share or {}).get(element, 1.0)
         checks.append(
             _check_element(element, limit, names, content, x, scrap, charge, steel_yield * charge,
                            rest, stays)
@@ -112,9 +117,10 @@ def _check_mix(
         for name in names
         if name not in scrap_pct
     ]
-    total = sum(np.asarray(share, dtype=float) for share in mix_share.values())
-    if not np.all(np.abs(total - 1.0) <= 1e-9):
-        faults.append(Fault("choice.scrap_mix", f"shares add up to {total}, not 1"))
+    total = np.ravel(sum(np.asarray(share, dtype=float) for share in mix_share.values()))
+    wrong = total[np.abs(total - 1.0) > 1e-9]
+    if wrong.size:
+        faults.append(Fault("choice.scrap_mix", f"shares add up to {wrong[0]:g}, not 1"))
     if faults:
         raise InputError(faults)
 
@@ -129,7 +135,7 @@ def _check_element(
     charge: Array,
     steel: Array,
     rest: Array,
-    stays: float,
+    stays: Array,
 ) -> TrampCheck:
     mix = content @ x
     brought_by_rest = (charge - scrap) * rest
@@ -144,7 +150,7 @@ def _check_element(
     with np.errstate(divide="ignore", invalid="ignore"):
         # a mix of one scrap is thinned by metal that is free of the element
         mean_others = np.where(others > 1e-12, (mix - share * worst) / others, 0.0)
-        allowed = limit * steel / stays if stays > 0.0 else np.full_like(steel, np.inf)
+        allowed = np.where(stays > 0.0, limit * steel / stays, np.inf)
         allowed_mix = np.where(scrap > 0.0, (allowed - brought_by_rest) / scrap, np.inf)
         fitting = (allowed_mix - mean_others) / (worst - mean_others)
         per_charge = (allowed / charge - rest) / (mix - rest)

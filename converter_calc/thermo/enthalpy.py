@@ -1,0 +1,318 @@
+"""Enthalpy of every species as a function of temperature.
+
+Zero: pure elements in their stable form at 298.15 K and 1 bar; the enthalpy of a compound
+holds its heat of formation, so reaction heats come out as differences. Coefficients and
+sources: data/species.csv. Outside the temperatures of the data the heat capacity is taken
+as constant at its value at the end of the range.
+"""
+
+from __future__ import annotations
+
+import difflib
+from collections.abc import Sequence
+from dataclasses import dataclass
+from functools import cache
+from typing import Any, Literal, TypeAlias
+
+import numpy as np
+
+from converter_calc.basis.dual import Array, Dual, Num
+from converter_calc.basis.elements import molar_mass
+from converter_calc.basis.errors import DataError
+from converter_calc.data.tables import read_csv_rows
+
+Phase: TypeAlias = Literal["stable", "s", "l", "g"]
+PHASES = ("stable", "s", "l", "g")
+T_REFERENCE_K = 298.15
+#: Columns of data/species.csv, as powers of T (None: logarithm).
+_TERMS: tuple[tuple[str, float | None], ...] = (
+    *(("h_inv", -1.0), ("h_ln", None), ("h_0", 0.0), ("h_1", 1.0), ("h_2", 2.0)),
+    *(("h_3", 3.0), ("h_4", 4.0), ("h_5", 5.0), ("h_half", 0.5)),
+)
+#: Functions of t = T / 1000 K in which both H and its derivative are written.
+_BASIS: tuple[float | None, ...] = (0.0, 1.0, 2.0, 3.0, 4.0, 5.0, None, -1.0, -2.0, 0.5, -0.5)
+_HIGHEST_POWER = 5
+#: Multiplications below which OpenBLAS does not split a product over threads (2**18).
+_ONE_THREAD = 200_000
+_KILO = 1000.0
+
+
+@dataclass(frozen=True)
+class Segment:
+    """Enthalpy of one phase between two temperatures.
+
+    h : coefficients of H [J/mol] over the basis functions of t = T / 1000 K; cp : those of
+    the heat capacity [J/(mol K)].
+    """
+
+    species: str
+    phase: str
+    T_low_K: float
+    T_high_K: float
+    h: Array
+    cp: Array
+
+    def straight_from(self, T_K: float) -> Segment:
+        """Continuation with the enthalpy and heat capacity that this segment has at T_K."""
+        basis = _basis_values(np.array([T_K]), range(len(_BASIS)))[:, 0]
+        H, cp = float(self.h @ basis), float(self.cp @ basis)
+        h, slope = np.zeros(len(_BASIS)), np.zeros(len(_BASIS))
+        h[0], h[1], slope[0] = H - cp * T_K, cp * _KILO, cp
+        return Segment(self.species, self.phase, -np.inf, np.inf, h, slope)
+
+
+def _basis_values(T_K: Array, columns: Sequence[int]) -> Array:
+    """Basis functions at T (n,), one row for each of `columns` (in rising order)."""
+    t = T_K * (1.0 / _KILO)
+    out = np.empty((len(columns), t.size))
+    for row, column in enumerate(columns):
+        if column == 0:
+            out[row] = 1.0
+        elif column <= _HIGHEST_POWER:
+            if row and columns[row - 1] == column - 1:
+                np.multiply(out[row - 1], t, out=out[row])
+            else:
+                out[row] = t**column
+        else:
+            # no table with these terms starts below 100 K; colder, their coefficient is zero
+            out[row] = _special(np.maximum(t, 1e-3), _BASIS[column])
+    return out
+
+
+def _special(t: Array, power: float | None) -> Array:
+    if power is None:
+        return np.log(t)
+    if abs(power) == 0.5:
+        root = np.sqrt(t)
+        return root if power > 0.0 else 1.0 / root
+    inverse = 1.0 / t
+    return inverse if power == -1.0 else inverse * inverse
+
+
+def _compile(row: dict[str, str]) -> Segment:
+    h, cp = np.zeros(len(_BASIS)), np.zeros(len(_BASIS))
+    place = {power: index for index, power in enumerate(_BASIS)}
+    for name, power in _TERMS:
+        b = float(row[name])
+        if b == 0.0:
+            continue
+        if power is None:  # b ln T = b ln t + b ln 1000; its derivative is b / T
+            h[place[None]] += b
+            h[0] += b * np.log(_KILO)
+            cp[place[-1.0]] += b / _KILO
+        else:
+            h[place[power]] += b * _KILO**power
+            if power != 0.0:
+                cp[place[power - 1.0]] += b * power * _KILO ** (power - 1.0)
+    low, high = float(row["T_low_K"]), float(row["T_high_K"])
+    return Segment(row["species"], row["phase"], low, high, h, cp)
+
+
+@cache
+def _all_segments() -> dict[str, tuple[Segment, ...]]:
+    segments: dict[str, list[Segment]] = {}
+    for row in read_csv_rows("species.csv"):
+        segments.setdefault(row["species"], []).append(_compile(row))
+    return {name: tuple(parts) for name, parts in segments.items()}
+
+
+@cache
+def _formulas() -> dict[str, str]:
+    return {row["species"]: row["formula"] for row in read_csv_rows("species.csv")}
+
+
+def known_species() -> tuple[str, ...]:
+    """Keys of all species that have enthalpy data, in the order of the table."""
+    return tuple(_formulas())
+
+
+def _check_known(species: str) -> None:
+    if species not in _formulas():
+        near = difflib.get_close_matches(species, _formulas(), n=1, cutoff=0.4)
+        hint = f"; did you mean {near[0]}?" if near else ""
+        raise DataError(f"no enthalpy data for species '{species}'{hint}")
+
+
+def species_formula(species: str) -> str:
+    """Chemical formula of a species ("H2O" for "H2O_liquid"); DataError if it is not known."""
+    _check_known(species)
+    return _formulas()[species]
+
+
+def segments_of(species: str, phase: Phase = "stable") -> tuple[Segment, ...]:
+    """Segments of a species in order of temperature.
+
+    Parameters
+    ----------
+    species : a key of data/species.csv. phase : "stable" for all phases, each in its range;
+        "s", "l" or "g" for one phase only.
+
+    Raises DataError for an unknown species (with the nearest one) or a phase without data.
+    """
+    _check_known(species)
+    if phase not in PHASES:
+        raise DataError(f"phase '{phase}' of {species} is not one of {', '.join(PHASES)}")
+    parts = _all_segments()[species]
+    if phase == "stable":
+        return parts
+    chosen = tuple(part for part in parts if part.phase == phase)
+    if not chosen:
+        have = ", ".join(sorted({part.phase for part in parts}))
+        raise DataError(f"no enthalpy data for {species} in phase '{phase}' (there is: {have})")
+    return chosen
+
+
+class _Interval:
+    """Coefficients of all species of a set between two neighbouring breakpoints."""
+
+    def __init__(self, h: Array, cp: Array) -> None:
+        used = np.any(h != 0.0, axis=0) | np.any(cp != 0.0, axis=0)
+        self.columns = [int(i) for i in np.flatnonzero(used)] or [0]
+        self.h = np.ascontiguousarray(h[:, self.columns])
+        self.both = np.vstack([self.h, cp[:, self.columns]])
+
+    def h_and_cp(self, T_K: Array) -> Array:
+        return _product(self.both, _basis_values(T_K, self.columns))
+
+    def h_only(self, T_K: Array) -> Array:
+        return _product(self.h, _basis_values(T_K, self.columns))
+
+
+def _product(a: Array, b: Array) -> Array:
+    """Product of a and b in blocks so small that the linear algebra library stays on one thread.
+
+    Waking a second thread costs more than these thin products, by far on a busy machine.
+    """
+    width = max(1, _ONE_THREAD // a.size)
+    if b.shape[1] <= width:
+        return a @ b
+    out = np.empty((a.shape[0], b.shape[1]))
+    for start in range(0, b.shape[1], width):
+        np.matmul(a, b[:, start : start + width], out=out[:, start : start + width])
+    return out
+
+
+class EnthalpySet:
+    """Enthalpies of several species at once.
+
+    Parameters
+    ----------
+    members : pairs (species key, phase). "stable": the segment whose range holds T. "s",
+        "l" or "g": this phase at every T. Beyond the first or last segment so chosen the
+        heat capacity is constant at its value there (a supercooled liquid, a superheated
+        solid, a compound hotter than its table).
+    offsets_J_kg : added to the enthalpy of each member, [J/kg]; none if not given.
+
+    Raises DataError for an unknown species or a phase without data.
+    """
+
+    def __init__(
+        self, members: Sequence[tuple[str, Phase]], offsets_J_kg: Sequence[float] | None = None
+    ) -> None:
+        self.species = tuple(name for name, _ in members)
+        self._parts = [segments_of(name, phase) for name, phase in members]
+        self._kg_mol = [molar_mass(species_formula(name)) * 1e-3 for name in self.species]
+        self._offsets = np.zeros(len(members)) if offsets_J_kg is None else np.array(offsets_J_kg)
+        edges = {
+            T for parts in self._parts for part in parts for T in (part.T_low_K, part.T_high_K)
+        }
+        self._edges = np.array(sorted(edges))
+        self._intervals: dict[int, _Interval] = {}
+
+    def evaluate(self, T_K: Any) -> tuple[Array, Array]:
+        """Enthalpy [J/kg of formula] and heat capacity [J/(kg K)] of each species.
+
+        Parameters
+        ----------
+        T_K : temperature [K], a number or array-like (n,); any real value, NaN gives NaN.
+
+        Returns
+        -------
+        h, cp : arrays (species, n); (species,) for a number. cp is the exact derivative of
+        h by T (at a transition, that of the phase above).
+        """
+        T = np.asarray(T_K, dtype=float)
+        both = self._calculate(T.reshape(-1), slopes=True).reshape(-1, *T.shape)
+        count = len(self.species)
+        return both[:count], both[count:]
+
+    def evaluate_dual(self, T_K: Num) -> list[Num]:
+        """Enthalpy [J/kg of formula] of each species at T [K], with derivatives if T is a Dual.
+
+        Returns a list in the order of the members, shaped like T. Range as for `evaluate`.
+        """
+        if isinstance(T_K, Dual):
+            h, cp = self.evaluate(T_K.v)
+            return [T_K.chain(h[i], cp[i]) for i in range(len(self.species))]
+        T = np.asarray(T_K, dtype=float)
+        h = self._calculate(T.reshape(-1), slopes=False).reshape(-1, *T.shape)
+        return [h[i] for i in range(len(self.species))]
+
+    def _calculate(self, T: Array, *, slopes: bool) -> Array:
+        count = len(self.species) * (2 if slopes else 1)
+        if T.size == 0 or count == 0:
+            return np.empty((count, T.size))
+        ends = np.searchsorted(self._edges, (T.min(), T.max()), side="right")
+        if ends[0] == ends[1]:
+            return self._in_interval(int(ends[0]), T, slopes=slopes)
+        where = np.searchsorted(self._edges, T, side="right")
+        out = np.empty((count, T.size))
+        for index in np.unique(where):
+            chosen = where == index
+            out[:, chosen] = self._in_interval(int(index), T[chosen], slopes=slopes)
+        return out
+
+    def _in_interval(self, index: int, T: Array, *, slopes: bool) -> Array:
+        if index not in self._intervals:
+            self._intervals[index] = self._build(index)
+        interval = self._intervals[index]
+        return interval.h_and_cp(T) if slopes else interval.h_only(T)
+
+    def _build(self, index: int) -> _Interval:
+        low = self._edges[index - 1] if index > 0 else -np.inf
+        h, cp = [], []
+        for parts, kg_mol in zip(self._parts, self._kg_mol, strict=True):
+            if low < parts[0].T_low_K:
+                part = parts[0].straight_from(parts[0].T_low_K)
+            elif low >= parts[-1].T_high_K:
+                part = parts[-1].straight_from(parts[-1].T_high_K)
+            else:
+                part = next(part for part in parts if low < part.T_high_K)
+            h.append(part.h / kg_mol)
+            cp.append(part.cp / kg_mol)
+        table = np.array(h)
+        table[:, 0] += self._offsets
+        return _Interval(table, np.array(cp))
+
+
+@cache
+def _single(species: str, phase: Phase) -> tuple[EnthalpySet, float]:
+    return EnthalpySet([(species, phase)]), molar_mass(species_formula(species)) * 1e-3
+
+
+def enthalpy_J_kg(species: str, T_K: Num, phase: Phase = "stable") -> Num:
+    """Enthalpy of one species [J/kg of formula].
+
+    Parameters
+    ----------
+    species : a key of data/species.csv. T_K : temperature [K], a number, array-like (n,) or
+        Dual; outside the data the heat capacity is constant. phase : see `segments_of`.
+
+    Returns a float for a number, else an array (n,) or a Dual. Raises DataError for an
+    unknown species or phase. Source: data/species.csv.
+    """
+    (h,) = _single(species, phase)[0].evaluate_dual(T_K)
+    return float(h) if not isinstance(h, Dual) and np.ndim(h) == 0 else h
+
+
+def enthalpy_J_mol(species: str, T_K: Num, phase: Phase = "stable") -> Num:
+    """Enthalpy of one species [J/mol of formula]; all else as for `enthalpy_J_kg`."""
+    return enthalpy_J_kg(species, T_K, phase) * _single(species, phase)[1]
+
+
+def formation_enthalpy_J_mol(species: str) -> float:
+    """Heat of formation at 298.15 K [J/mol] of the form that is stable there.
+
+    Zero for the elements. Raises DataError for an unknown species. Source: data/species.csv.
+    """
+    return float(enthalpy_J_mol(species, T_REFERENCE_K))
