@@ -71,7 +71,9 @@ def check_document(document: Mapping[str, Any], faults: list[Fault]) -> Givens:
             _take(given, top, section, found, faults)
         elif section not in sections() or section == "":
             names = [*sections(), *sections()[""]]
-            faults.append(Fault(str(section)[:60], f"unknown section{nearest(str(section), names)}"))
+            faults.append(
+                Fault(str(section)[:60], f"unknown section{nearest(str(section), names)}")
+            )
         else:
             table = take_table(given, section, faults)
             for key, value in (table or {}).items():
@@ -167,6 +169,15 @@ def _choices(found: Givens, faults: list[Fault]) -> None:
         _is_scrap(name, "choice.scrap_order", found, broken, faults)
     if len(set(found.scrap_order)) < len(found.scrap_order):
         faults.append(Fault("choice.scrap_order", "names a scrap twice"))
+    _roles(found, broken, faults)
+    for species in found.shares.get("dust_pct", {}):
+        if species not in known_species() or species in ("CO2", "P2O5", "H2O"):
+            message = f"{show(species)} is not a species known here"
+            faults.append(Fault("practice.dust_pct", message + nearest(species, known_species())))
+
+
+def _roles(found: Givens, broken: set[str], faults: list[Fault]) -> None:
+    """Lime, magnesia flux, coolant and fuel are materials that can serve as such."""
     for role, element in (("lime", "Ca"), ("magnesia_flux", "Mg"), ("coolant", ""), ("fuel", "")):
         row = parameters()[role]
         name = found.texts.setdefault(role, row.default)
@@ -176,15 +187,9 @@ def _choices(found: Givens, faults: list[Fault]) -> None:
         elif element and name not in broken and not _holds(found.materials[name], element):
             message = f"{name} holds no {element}, so it cannot serve as {row.key}"
             faults.append(Fault(row.place, message))
-    for species in found.shares.get("dust_pct", {}):
-        if species not in known_species() or species in ("CO2", "P2O5", "H2O"):
-            message = f"{show(species)} is not a species known here"
-            faults.append(Fault("practice.dust_pct", message + nearest(species, known_species())))
 
 
-def _is_scrap(
-    name: str, place: str, found: Givens, broken: set[str], faults: list[Fault]
-) -> None:
+def _is_scrap(name: str, place: str, found: Givens, broken: set[str], faults: list[Fault]) -> None:
     scraps = [key for key, material in found.materials.items() if material.kind == "scrap"]
     if name not in found.materials:
         faults.append(Fault(place, f"no material {show(name)}{nearest(name, scraps)}"))
@@ -233,9 +238,11 @@ def check_ranges(columns: Columns, names: Iterable[Parameter]) -> Iterable[Fault
         with np.errstate(invalid="ignore"):
             bad = (values < row.low) | (values > row.high)
         if bad.any():
-            yield from columns.tell(
-                bad, row.name, lambda i, v=values, row=row: outside(float(v[i]), row)
-            )
+            yield from columns.tell(bad, row.name, _outside_at(values, row))
+
+
+def _outside_at(values: Array, row: Parameter) -> Callable[[int], str]:
+    return lambda i: outside(float(values[i]), row)
 
 
 def check_columns(columns: Columns, found: Givens) -> list[Fault]:
@@ -274,9 +281,10 @@ PINNED_OXIDES = ("FeO", "Fe2O3", "MgO", "CaO")
 HEAT_LOSSES = tuple(
     "pin_heat_loss_" + unit for unit in ("MJ", "MJ_per_t", "MJ_per_min", "share_pct")
 )
+SHARED_ELEMENTS = ("P", "Mn", "S", "V", "Cr", "Ti", "Si", "Al")
 #: Pairs of inputs of which only one can be given.
 CONTRADICTIONS: tuple[tuple[str, str], ...] = (
-    *((f"pin_L_{el}", f"pin_end_{el}_pct") for el in "P Mn S V Cr Ti Si Al".split()),
+    *((f"pin_L_{el}", f"pin_end_{el}_pct") for el in SHARED_ELEMENTS),
     *((HEAT_LOSSES[i], HEAT_LOSSES[j]) for i in range(4) for j in range(i + 1, 4)),
     *((loss, "pin_end_temp_C") for loss in HEAT_LOSSES),
     ("pin_slag_T_Fe_pct", "pin_iron_to_slag_pct"),

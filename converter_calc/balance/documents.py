@@ -17,10 +17,33 @@ DEEPEST_TABLE = 8
 RIVALS = {
     "choice": ({"scrap_mix", "scrap_order"},),
     "charge": ({"scrap_kg", "scrap_share_pct"},),
-    "pin": (
-        {"heat_loss_MJ", "heat_loss_MJ_per_t", "heat_loss_MJ_per_min", "heat_loss_share_pct"},
-    ),
+    "pin": ({"heat_loss_MJ", "heat_loss_MJ_per_t", "heat_loss_MJ_per_min", "heat_loss_share_pct"},),
 }
+
+
+def _fail(path: Path, message: str) -> InputError:
+    return InputError([Fault(str(path), message)])
+
+
+def _read_text(path: Path) -> str:
+    try:
+        if path.is_dir():
+            raise _fail(path, "is a directory, not a heat file")
+        size = path.stat().st_size
+        if size > LARGEST_FILE_BYTES:
+            most = LARGEST_FILE_BYTES / 1e6
+            raise _fail(path, f"has {size / 1e6:.1f} MB; a heat file has at most {most:g} MB")
+        with path.open("rb") as file:
+            raw = file.read(LARGEST_FILE_BYTES + 1)
+    except FileNotFoundError as error:
+        raise _fail(path, "no such file") from error
+    except (OSError, ValueError) as error:  # ValueError: a null byte in the name
+        reason = getattr(error, "strerror", None) or error
+        raise _fail(path, f"cannot be read: {reason}") from error
+    try:
+        return raw.decode("utf-8-sig")
+    except UnicodeDecodeError as error:
+        raise _fail(path, f"is not UTF-8 text (byte {error.start + 1})") from error
 
 
 def read_document(path: Path) -> dict[str, Any]:
@@ -29,39 +52,17 @@ def read_document(path: Path) -> dict[str, Any]:
     Raises InputError (one line: what is wrong, and where) for a missing, unreadable, empty,
     huge, too deep or malformed file.
     """
-    name = str(path)
-
-    def fail(message: str) -> InputError:
-        return InputError([Fault(name, message)])
-
-    try:
-        if path.is_dir():
-            raise fail("is a directory, not a heat file")
-        size = path.stat().st_size
-        if size > LARGEST_FILE_BYTES:
-            raise fail(
-                f"is {size / 1e6:.1f} MB; a heat file has at most {LARGEST_FILE_BYTES / 1e6:g} MB"
-            )
-        with path.open("rb") as file:
-            raw = file.read(LARGEST_FILE_BYTES + 1)
-    except FileNotFoundError as error:
-        raise fail("no such file") from error
-    except (OSError, ValueError) as error:  # ValueError: a null byte in the name
-        raise fail(f"cannot be read: {getattr(error, 'strerror', None) or error}") from error
-    try:
-        text = raw.decode("utf-8-sig")
-    except UnicodeDecodeError as error:
-        raise fail(f"is not UTF-8 text (byte {error.start + 1})") from error
+    text = _read_text(path)
     if not text.strip():
-        raise fail("is empty")
+        raise _fail(path, "is empty")
     try:
         document = tomllib.loads(text)
     except RecursionError as error:
-        raise fail("is nested too deeply") from error
+        raise _fail(path, "is nested too deeply") from error
     except ValueError as error:  # TOMLDecodeError, or a number of thousands of digits
-        raise fail(f"is not TOML: {error}") from error
+        raise _fail(path, f"is not TOML: {error}") from error
     if not document:
-        raise fail("holds no field")
+        raise _fail(path, "holds no field")
     return document
 
 
@@ -123,10 +124,7 @@ def lay_over(below: Mapping[str, Any], above: Mapping[str, Any]) -> dict[str, An
             merged[section] = lay_materials(have, given)
         else:
             dropped = {
-                key
-                for rivals in RIVALS.get(section, ())
-                if rivals & set(given)
-                for key in rivals
+                key for rivals in RIVALS.get(section, ()) if rivals & set(given) for key in rivals
             }
             kept = {key: value for key, value in have.items() if key not in dropped}
             merged[section] = {**kept, **given}

@@ -58,9 +58,7 @@ def outside(number: float, row: Parameter) -> str:
     return text
 
 
-def take_text(
-    given: Any, allowed: Sequence[str], place: str, faults: list[Fault]
-) -> str | None:
+def take_text(given: Any, allowed: Sequence[str], place: str, faults: list[Fault]) -> str | None:
     """`given` as one of the texts allowed (any text where none are listed)."""
     if not isinstance(given, str):
         faults.append(Fault(place, f"must be text, given {show(given)}"))

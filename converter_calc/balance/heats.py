@@ -6,8 +6,7 @@ number, so that long tables stay small: replace arrays, do not write into them.
 
 from __future__ import annotations
 
-import re
-from collections.abc import Iterable, Mapping
+from collections.abc import Mapping
 from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -22,27 +21,28 @@ from converter_calc.balance.checks import (
     check_ranges,
 )
 from converter_calc.balance.documents import check_depth, read_document, read_shop, with_shop
+from converter_calc.balance.frames import (
+    blank_elements,
+    columns_of,
+    inputs_of_table,
+    keys_of,
+    one_grade,
+    row_names,
+)
 from converter_calc.balance.materials import Material
 from converter_calc.balance.schema import (
-    Parameter,
     element_parameter,
+    is_element_column,
     material_parameter,
-    nearest,
     number_names,
     parameters,
     parse_shares,
 )
 from converter_calc.basis.dual import Array
-from converter_calc.basis.elements import known_elements
 from converter_calc.basis.errors import Fault, InputError
 
 if TYPE_CHECKING:
     import pandas as pd
-
-_ELEMENT_COLUMN = re.compile(r"hm_([A-Z][a-z]?)_pct")
-_OUTCOME_COLUMN = re.compile(
-    r"tapped_at|vessel|steel_kg|end_temp_C|end_O_ppm|end_[A-Z][a-z]?_pct|slag_[A-Z]\w*_pct"
-)
 
 
 @dataclass
@@ -178,8 +178,8 @@ def heats_from_frame(
     else:
         document = read_shop(Path(shop))
     givens = check_document(document, faults)
-    rows = _frame_rows(givens, defaults or {}, faults)
-    arrays = _frame_arrays(frame, rows, faults)
+    rows = inputs_of_table(givens, defaults or {}, faults)
+    arrays = columns_of(frame, rows, faults)
     n = len(frame)
 
     elements: dict[str, Array] = {}
@@ -188,12 +188,10 @@ def heats_from_frame(
         (elements, givens.elements, element_parameter),
         (masses, givens.masses_kg, material_parameter),
     ):
-        for key in {**below, **{key: 0.0 for key in _keys(arrays, rows, make)}}:
+        for key in {**below, **dict.fromkeys(keys_of(arrays, rows, make))}:
             into[key] = _filled(arrays.get(make(key).name), below.get(key, np.nan), n)
-    ids, label = _row_names(frame)
-    columns = Columns(
-        _all_values(n, givens, arrays), elements, n, place_of=str, row_label=label
-    )
+    ids, label = row_names(frame)
+    columns = Columns(_all_values(n, givens, arrays), elements, n, place_of=str, row_label=label)
     mass_columns = Columns(
         {f"{name}_kg": kg for name, kg in masses.items()}, {}, n, place_of=str, row_label=label
     )
@@ -202,14 +200,15 @@ def heats_from_frame(
     faults += check_columns(columns, givens)
     if faults:
         raise InputError(faults)
-    grade, warnings = _one_grade(frame, givens)
-    warnings += _blank_elements(elements)
+    grade, warnings = one_grade(frame, givens)
+    warnings += blank_elements(elements)
     return _table(ids, columns, masses, givens, grade, warnings)
 
 
 def _place(name: str) -> str:
-    match = _ELEMENT_COLUMN.fullmatch(name)
-    return element_parameter(match.group(1)).place if match else parameters()[name].place
+    if is_element_column(name):
+        return element_parameter(name[3:-4]).place
+    return parameters()[name].place
 
 
 def _filled(array: Array | None, below: float, n: int) -> Array:
@@ -228,111 +227,6 @@ def _all_values(n: int, givens: Givens, arrays: Mapping[str, Array]) -> dict[str
             below = givens.elements.get(name[3:-4], below)
         values[name] = _filled(arrays.get(name), below, n)
     return values
-
-
-def _frame_rows(
-    givens: Givens, defaults: Mapping[str, float], faults: list[Fault]
-) -> dict[str, Parameter]:
-    """Inputs that may be a column, by name; defaults are put among the givens."""
-    rows = {name: parameters()[name] for name in number_names()}
-    rows |= {row.name: row for row in map(element_parameter, known_elements())}
-    for name in givens.materials:
-        rows.setdefault(f"{name}_kg", material_parameter(name))
-    for name, number in defaults.items():
-        if name not in rows:
-            faults.append(Fault(name, f"unknown default{nearest(name, rows)}"))
-        elif name.startswith("hm_"):
-            givens.elements.setdefault(name[3:-4], float(number))
-        elif name in parameters():
-            givens.numbers.setdefault(name, float(number))
-        else:
-            givens.masses_kg.setdefault(name[:-3], float(number))
-    return rows
-
-
-def _frame_arrays(
-    frame: pd.DataFrame, rows: Mapping[str, Parameter], faults: list[Fault]
-) -> dict[str, Array]:
-    """Numeric columns as float arrays, NaN where blank."""
-    arrays: dict[str, Array] = {}
-    _, label = _row_names(frame)
-    for place, column in enumerate(frame.columns):
-        name = str(column)
-        if name in arrays:
-            faults.append(Fault(name, "is a column twice"))
-        elif name in rows:
-            arrays[name] = _column(frame.iloc[:, place], name, label, faults)
-        elif name not in ("heat_id", "grade") and not _OUTCOME_COLUMN.fullmatch(name):
-            if name in parameters():
-                message = f"is no column; give it in the shop file as {parameters()[name].place}"
-            else:
-                message = f"unknown column{nearest(name, [*rows, 'heat_id', 'grade'])}"
-            faults.append(Fault(name[:80], message))
-    return arrays
-
-
-def _column(series: Any, name: str, label: Any, faults: list[Fault]) -> Array:
-    import pandas as pd
-
-    if series.dtype == bool:
-        faults.append(Fault(name, "must hold numbers, holds true and false"))
-        return np.full(len(series), np.nan)
-    array = pd.to_numeric(series, errors="coerce").to_numpy(dtype=float, na_value=np.nan)
-    array = array.astype(float, copy=True)
-    columns = Columns({}, {}, len(array), place_of=str, row_label=label)
-    if not pd.api.types.is_numeric_dtype(series.dtype):
-        truth = series.map(lambda cell: isinstance(cell, bool)).to_numpy(dtype=bool)
-        text = np.isnan(array) & ~series.isna().to_numpy(dtype=bool) | truth
-        faults.extend(
-            columns.tell(
-                text, name, lambda i: f"must be a number, given {str(series.iloc[i])[:40]!r}"
-            )
-        )
-    infinite = np.isinf(array)
-    faults.extend(columns.tell(infinite, name, lambda i: f"must be finite, given {array[i]}"))
-    array[infinite] = np.nan
-    return array
-
-
-def _keys(arrays: Iterable[str], rows: Mapping[str, Parameter], make: Any) -> list[str]:
-    """Elements or materials, whichever `make` makes inputs of, that have a column."""
-    if make is element_parameter:
-        return [name[3:-4] for name in arrays if _ELEMENT_COLUMN.fullmatch(name)]
-    return [name[:-3] for name in arrays if name not in parameters() and rows[name].unit == "kg"]
-
-
-def _row_names(frame: pd.DataFrame) -> tuple[list[str], Any]:
-    """Name of each heat, and the words by which a fault names its row."""
-    labels = frame.index
-    if "heat_id" in frame.columns:
-        column = frame["heat_id"]
-        column = column.iloc[:, 0] if column.ndim > 1 else column
-        ids = column.astype(str).tolist()
-        return ids, lambda i: f" (row {labels[i]}, heat {ids[i]})"
-    return [str(label) for label in labels], lambda i: f" (row {labels[i]})"
-
-
-def _one_grade(frame: pd.DataFrame, givens: Givens) -> tuple[str | None, list[str]]:
-    """The grade of a table: that of its column where all rows agree, else that of the shop."""
-    if "grade" not in frame.columns:
-        return givens.texts.get("grade"), []
-    column = frame["grade"]
-    column = column.iloc[:, 0] if column.ndim > 1 else column
-    names = sorted({str(name) for name in column.dropna().unique()})
-    if len(names) <= 1:
-        return (names[0] if names else givens.texts.get("grade")), []
-    return None, [
-        f"grade: {len(names)} grades in one table; aims are taken from the columns, not from grades"
-    ]
-
-
-def _blank_elements(elements: Mapping[str, Array]) -> list[str]:
-    found = []
-    for element, pct in elements.items():
-        blank = int(np.isnan(pct).sum())
-        if 0 < blank < len(pct):
-            found.append(f"hm_{element}_pct: blank in {blank} heats, taken as 0 there")
-    return found
 
 
 def _table(

@@ -237,8 +237,7 @@ def _bind(analysis: dict[str, float], gas: str, holders: tuple[tuple[str, str], 
 
 
 def _bind_sulphur(parts: dict[str, float]) -> dict[str, float]:
-    """Sulphur of a slag or flux sits on calcium: CaO + S -> CaS (its oxygen is not in the
-    analysis)."""
+    """Sulphur of a slag or flux sits on calcium, CaO + S -> CaS; no analysis states its oxygen."""
     sulphur = parts.get("S", 0.0)
     mol = min(sulphur / molar_mass("S"), parts.get("CaO", 0.0) / molar_mass("CaO"))
     if mol <= 0.0:
@@ -257,7 +256,7 @@ def _as_weighed(
     values: Mapping[str, float],
     faults: list[Fault],
 ) -> dict[str, float]:
-    """kg of each species in 100 kg of the material as weighed."""
+    """Mass of each species [kg] in 100 kg of the material as weighed."""
     on_top = {WATER: values["moisture_pct"], OIL: values["oil_pct"], RUST: values["rust_pct"]}
     beside = math.fsum(on_top.values())
     clean = values.get("yield_pct", 100.0 - beside)

@@ -112,6 +112,11 @@ def material_parameter(material: str) -> Parameter:
     )  # fmt: skip
 
 
+def is_element_column(name: str) -> bool:
+    """Whether a flat name is that of an element of the hot metal, `hm_<El>_pct`."""
+    return name.startswith("hm_") and element_of_key(name[3:]) is not None
+
+
 def element_of_key(key: str) -> str | None:
     """The element of a key like `Cr_pct`; None where it is no known element."""
     symbol = key.removesuffix("_pct")

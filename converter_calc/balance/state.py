@@ -15,6 +15,7 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 from functools import cache
+from typing import Any
 
 from converter_calc.balance.charge import SLAG_OXIDES, Totals, oxide_factor, slag_enthalpy
 from converter_calc.balance.problem import SHARED, TO_DUST, TO_SLAG, Problem, given_totals
@@ -449,15 +450,27 @@ def _oxygen_share(species: str) -> float:
 
 
 @cache
-def enthalpies(species: tuple[str, ...], policy: str = "stable") -> EnthalpySet:
-    """Enthalpy functions of several species, built once."""
-    return EnthalpySet([(name, policy) for name in species])
+def gas_enthalpies() -> EnthalpySet:
+    """Enthalpy functions of the gases, in the order of GASES; built once."""
+    return EnthalpySet([(name, "stable") for name in GASES])
 
 
 @cache
-def metal_enthalpies(elements: tuple[str, ...]) -> MetalEnthalpy:
-    """Enthalpy functions of elements in liquid iron, built once."""
+def _metal(elements: tuple[str, ...]) -> MetalEnthalpy:
+    """Enthalpies of elements in liquid iron, built once."""
     return MetalEnthalpy(elements)
+
+
+@cache
+def _solid_lime() -> EnthalpySet:
+    return EnthalpySet([("CaO", "s")])
+
+
+@cache
+def _gas_and_dust_set(dust: tuple[str, ...]) -> EnthalpySet:
+    """Gases and dust at the temperature of the gas; dust without jumps at transitions."""
+    solids = [("P4O10" if name == "P2O5" else name, "top solid") for name in dust]
+    return EnthalpySet([*((name, "stable") for name in GASES), *solids])
 
 
 def _weighed(kg: Mapping[str, Num], h: Mapping[str, Num]) -> Num:
@@ -467,19 +480,19 @@ def _weighed(kg: Mapping[str, Num], h: Mapping[str, Num]) -> Num:
 def _heat(p: Problem, x: Mapping[str, Num], s: State) -> None:
     """Enthalpies of all outputs and the energy residual."""
     given, H = p.values, s.enthalpy_J
-    h = metal_enthalpies(tuple(s.metal_species_kg)).evaluate_dual(s.T_K)
+    oxides = tuple(name for name in SLAG_OXIDES if name in s.slag_species_kg)
+    h = _metal(tuple(s.metal_species_kg)).evaluate_dual(s.T_K)
     H["metal"] = _weighed(s.metal_species_kg, h)
-    slag = slag_enthalpy(tuple(name for name in SLAG_OXIDES if name in s.slag_species_kg))
-    H["slag"] = slag.enthalpy_J(s.slag_species_kg, s.T_K)
-    (h_CaO,) = enthalpies(("CaO",)).evaluate_dual(s.T_K)
-    H["undissolved"] = s.undissolved_kg * h_CaO
+    H["slag"] = slag_enthalpy(oxides).enthalpy_J(s.slag_species_kg, s.T_K)
+    H["undissolved"] = s.undissolved_kg * _solid_lime().evaluate_dual(s.T_K)[0]
 
     start = given["hot_metal_temp_C"] + ZERO_C_K
     base = start + given["gas_path_share"] * (s.T_K - start)
     if "pin_off_gas_temp_C" in given:
         base = p.pinned("off_gas_temp_C", lambda: base - ZERO_C_K) + ZERO_C_K
     s.gas_base_K = base
-    h = dict(zip(GASES, enthalpies(GASES).evaluate_dual(base), strict=True))
+    found = _gas_and_dust_set(tuple(s.dust_kg)).evaluate_dual(base)
+    h = dict(zip(GASES, found, strict=False))
     H["gas"] = _weighed(s.gas_kg, h)
     M = {name: molar_mass(name) * 1e-3 for name in ("CO", "CO2", "O2")}
     per_mol = h["CO"] * M["CO"] + h["O2"] * (0.5 * M["O2"]) - h["CO2"] * M["CO2"]
@@ -488,9 +501,7 @@ def _heat(p: Problem, x: Mapping[str, Num], s: State) -> None:
     if p.mask("pin_off_gas_temp_C") is not False:
         leaves = ad.where(p.mask("pin_off_gas_temp_C"), 0.0, leaves)
     H["gas"] = H["gas"] + s.post_combustion_J * leaves
-    names = tuple(s.dust_kg)
-    h = dict(zip(names, enthalpies(names).evaluate_dual(base), strict=True))
-    H["dust"] = _weighed(s.dust_kg, h)
+    H["dust"] = _weighed(s.dust_kg, dict(zip(s.dust_kg, found[len(GASES) :], strict=True)))
 
     out = H["metal"] + H["slag"] + H["undissolved"] + H["gas"] + H["dust"]
     s.heat_loss_J = x["heat_loss_J"] if "heat_loss_J" in x else heat_loss_J(p, s)

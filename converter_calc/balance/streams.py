@@ -14,9 +14,10 @@ import numpy as np
 
 from converter_calc.balance.charge import Content, elements_of
 from converter_calc.balance.problem import Problem
-from converter_calc.balance.state import GASES, State, enthalpies
+from converter_calc.balance.state import GASES, State, gas_enthalpies
 from converter_calc.basis.dual import Array, Num
 from converter_calc.basis.units import MJ, ZERO_C_K
+from converter_calc.thermo.enthalpy import enthalpy_J_kg
 
 GAS_TEMPERATURE_STEPS = 8
 
@@ -79,8 +80,7 @@ def _material_stream(name: str, kg: Num, part: Content) -> Stream:
 def gas_stream(name: str, side: str, temp_C: Num, species_kg: Mapping[str, Num]) -> Stream:
     """A gas at a given temperature."""
     T_K = np.atleast_1d(np.asarray(temp_C, dtype=float)) + ZERO_C_K
-    h, _ = enthalpies(tuple(species_kg)).evaluate(T_K)
-    heat = sum(kg * h[row] for row, kg in enumerate(species_kg.values()))
+    heat = sum(kg * enthalpy_J_kg(gas, T_K) for gas, kg in species_kg.items())
     return Stream(name, side, "gas", temp_C, heat, dict(species_kg))
 
 
@@ -110,7 +110,7 @@ def off_gas_temperature_C(p: Problem, s: State) -> Array:
     """
     T_K = np.array(np.broadcast_to(s.gas_base_K, (p.n,)), dtype=float)
     for _ in range(GAS_TEMPERATURE_STEPS):
-        h, cp = enthalpies(GASES).evaluate(T_K)
+        h, cp = gas_enthalpies().evaluate(T_K)
         heat = sum(s.gas_kg[gas] * h[row] for row, gas in enumerate(GASES))
         rise = sum(s.gas_kg[gas] * cp[row] for row, gas in enumerate(GASES))
         with np.errstate(all="ignore"):

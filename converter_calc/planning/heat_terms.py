@@ -62,8 +62,10 @@ def formation_J_kg(species: str) -> float:
 
 
 def stream_formation_J(stream: Stream) -> Num:
-    """Heat of formation of a stream at 25 °C [J], slag compounds included in molten slag."""
+    """Heat of formation of a stream at 25 °C [J]: none for metal, compounds of slag included."""
     species = stream.species_kg
+    if stream.kind == "metal":
+        return 0.0
     if stream.kind == "slag":
         oxides = {name: kg for name, kg in species.items() if name in SLAG_OXIDES}
         return slag_enthalpy(tuple(oxides)).formation_J(oxides)

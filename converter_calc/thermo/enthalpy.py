@@ -21,8 +21,8 @@ from converter_calc.basis.elements import molar_mass
 from converter_calc.basis.errors import DataError
 from converter_calc.data.tables import read_csv_rows
 
-Phase: TypeAlias = Literal["stable", "s", "l", "g"]
-PHASES = ("stable", "s", "l", "g")
+Phase: TypeAlias = Literal["stable", "s", "l", "g", "top solid"]
+PHASES = ("stable", "s", "l", "g", "top solid")
 T_REFERENCE_K = 298.15
 #: Columns of data/species.csv, as powers of T (None: logarithm).
 _TERMS: tuple[tuple[str, float | None], ...] = (
@@ -61,6 +61,16 @@ class Segment:
         return Segment(self.species, self.phase, -np.inf, np.inf, h, slope)
 
 
+#: The other functions of t; numpy raises to a power ten times slower than it divides.
+_OTHER: dict[float | None, Any] = {
+    None: np.log,
+    -1.0: np.reciprocal,
+    -2.0: lambda t: 1.0 / (t * t),
+    0.5: np.sqrt,
+    -0.5: lambda t: 1.0 / np.sqrt(t),
+}
+
+
 def _basis_values(T_K: Array, columns: Sequence[int]) -> Array:
     """Basis functions at T (n,), one row for each of `columns` (in rising order)."""
     t = T_K * (1.0 / _KILO)
@@ -75,18 +85,8 @@ def _basis_values(T_K: Array, columns: Sequence[int]) -> Array:
                 out[row] = t**column
         else:
             # no table with these terms starts below 100 K; colder, their coefficient is zero
-            out[row] = _special(np.maximum(t, 1e-3), _BASIS[column])
+            out[row] = _OTHER[_BASIS[column]](np.maximum(t, 1e-3))
     return out
-
-
-def _special(t: Array, power: float | None) -> Array:
-    if power is None:
-        return np.log(t)
-    if abs(power) == 0.5:
-        root = np.sqrt(t)
-        return root if power > 0.0 else 1.0 / root
-    inverse = 1.0 / t
-    return inverse if power == -1.0 else inverse * inverse
 
 
 def _compile(row: dict[str, str]) -> Segment:
@@ -145,7 +145,8 @@ def segments_of(species: str, phase: Phase = "stable") -> tuple[Segment, ...]:
     Parameters
     ----------
     species : a key of data/species.csv. phase : "stable" for all phases, each in its range;
-        "s", "l" or "g" for one phase only.
+        "s", "l" or "g" for one phase only; "top solid" for the last solid form alone, which
+        has no jump of enthalpy at any temperature.
 
     Raises DataError for an unknown species (with the nearest one) or a phase without data.
     """
@@ -155,10 +156,13 @@ def segments_of(species: str, phase: Phase = "stable") -> tuple[Segment, ...]:
     parts = _all_segments()[species]
     if phase == "stable":
         return parts
-    chosen = tuple(part for part in parts if part.phase == phase)
+    wanted = "s" if phase == "top solid" else phase
+    chosen = tuple(part for part in parts if part.phase == wanted)
     if not chosen:
         have = ", ".join(sorted({part.phase for part in parts}))
         raise DataError(f"no enthalpy data for {species} in phase '{phase}' (there is: {have})")
+    if phase == "top solid":
+        return chosen[-1:]
     return chosen
 
 
@@ -171,25 +175,18 @@ class _Interval:
         self.h = np.ascontiguousarray(h[:, self.columns])
         self.both = np.vstack([self.h, cp[:, self.columns]])
 
-    def h_and_cp(self, T_K: Array) -> Array:
-        return _product(self.both, _basis_values(T_K, self.columns))
+    def write(self, T_K: Array, out: Array, *, slopes: bool) -> None:
+        """Write H, or H and below it cp, of all species at T (n,) into `out`.
 
-    def h_only(self, T_K: Array) -> Array:
-        return _product(self.h, _basis_values(T_K, self.columns))
-
-
-def _product(a: Array, b: Array) -> Array:
-    """Product of a and b in blocks so small that the linear algebra library stays on one thread.
-
-    Waking a second thread costs more than these thin products, by far on a busy machine.
-    """
-    width = max(1, _ONE_THREAD // a.size)
-    if b.shape[1] <= width:
-        return a @ b
-    out = np.empty((a.shape[0], b.shape[1]))
-    for start in range(0, b.shape[1], width):
-        np.matmul(a, b[:, start : start + width], out=out[:, start : start + width])
-    return out
+        The product is made in blocks so small that the linear algebra library stays on one
+        thread: waking another costs more than these thin products, by far on a busy machine.
+        """
+        a = self.both if slopes else self.h
+        width = max(1, _ONE_THREAD // a.size)
+        for start in range(0, T_K.size, width):
+            block = slice(start, start + width)
+            basis = _basis_values(T_K[block], self.columns)
+            np.matmul(a, basis, out=out[:, block])
 
 
 class EnthalpySet:
@@ -198,9 +195,9 @@ class EnthalpySet:
     Parameters
     ----------
     members : pairs (species key, phase). "stable": the segment whose range holds T. "s",
-        "l" or "g": this phase at every T. Beyond the first or last segment so chosen the
-        heat capacity is constant at its value there (a supercooled liquid, a superheated
-        solid, a compound hotter than its table).
+        "l", "g" or "top solid": this phase at every T. Beyond the first or last segment so
+        chosen the heat capacity is constant at its value there (a supercooled liquid, a
+        superheated solid, a compound hotter than its table).
     offsets_J_kg : added to the enthalpy of each member, [J/kg]; none if not given.
 
     Raises DataError for an unknown species or a phase without data.
@@ -219,12 +216,13 @@ class EnthalpySet:
         self._edges = np.array(sorted(edges))
         self._intervals: dict[int, _Interval] = {}
 
-    def evaluate(self, T_K: Any) -> tuple[Array, Array]:
+    def evaluate(self, T_K: Any, out: Array | None = None) -> tuple[Array, Array]:
         """Enthalpy [J/kg of formula] and heat capacity [J/(kg K)] of each species.
 
         Parameters
         ----------
         T_K : temperature [K], a number or array-like (n,); any real value, NaN gives NaN.
+        out : contiguous array (2 species, n) to hold the results, else a new one is made.
 
         Returns
         -------
@@ -232,8 +230,9 @@ class EnthalpySet:
         h by T (at a transition, that of the phase above).
         """
         T = np.asarray(T_K, dtype=float)
-        both = self._calculate(T.reshape(-1), slopes=True).reshape(-1, *T.shape)
         count = len(self.species)
+        both = np.empty((2 * count, *T.shape)) if out is None else out
+        self._calculate(T.reshape(-1), both.reshape(2 * count, -1), slopes=True)
         return both[:count], both[count:]
 
     def evaluate_dual(self, T_K: Num) -> list[Num]:
@@ -245,28 +244,28 @@ class EnthalpySet:
             h, cp = self.evaluate(T_K.v)
             return [T_K.chain(h[i], cp[i]) for i in range(len(self.species))]
         T = np.asarray(T_K, dtype=float)
-        h = self._calculate(T.reshape(-1), slopes=False).reshape(-1, *T.shape)
+        h = np.empty((len(self.species), *T.shape))
+        self._calculate(T.reshape(-1), h.reshape(len(self.species), -1), slopes=False)
         return [h[i] for i in range(len(self.species))]
 
-    def _calculate(self, T: Array, *, slopes: bool) -> Array:
-        count = len(self.species) * (2 if slopes else 1)
-        if T.size == 0 or count == 0:
-            return np.empty((count, T.size))
+    def _calculate(self, T: Array, out: Array, *, slopes: bool) -> None:
+        if out.size == 0:
+            return
         ends = np.searchsorted(self._edges, (T.min(), T.max()), side="right")
         if ends[0] == ends[1]:
-            return self._in_interval(int(ends[0]), T, slopes=slopes)
+            self._interval(int(ends[0])).write(T, out, slopes=slopes)
+            return
         where = np.searchsorted(self._edges, T, side="right")
-        out = np.empty((count, T.size))
         for index in np.unique(where):
             chosen = where == index
-            out[:, chosen] = self._in_interval(int(index), T[chosen], slopes=slopes)
-        return out
+            part = np.empty((out.shape[0], int(chosen.sum())))
+            self._interval(int(index)).write(T[chosen], part, slopes=slopes)
+            out[:, chosen] = part
 
-    def _in_interval(self, index: int, T: Array, *, slopes: bool) -> Array:
+    def _interval(self, index: int) -> _Interval:
         if index not in self._intervals:
             self._intervals[index] = self._build(index)
-        interval = self._intervals[index]
-        return interval.h_and_cp(T) if slopes else interval.h_only(T)
+        return self._intervals[index]
 
     def _build(self, index: int) -> _Interval:
         low = self._edges[index - 1] if index > 0 else -np.inf
