@@ -130,6 +130,7 @@ def one_grade(frame: pd.DataFrame, givens: Givens) -> tuple[str | None, list[str
 
 
 def blank_elements(elements: Mapping[str, Array]) -> list[str]:
+    """A warning for each element that some heats give and others leave blank."""
     found = []
     for element, pct in elements.items():
         blank = int(np.isnan(pct).sum())

@@ -12,7 +12,7 @@ from dataclasses import dataclass
 from functools import cache
 from typing import Any
 
-from converter_calc.balance.fields import take_number, take_shares, take_table, take_text
+from converter_calc.balance.fields import show, take_number, take_shares, take_table, take_text
 from converter_calc.balance.schema import material_fields, nearest, parse_shares
 from converter_calc.basis.elements import molar_mass
 from converter_calc.basis.errors import Fault, InputError
@@ -153,12 +153,7 @@ def _take_fields(
 
 
 def _unknown(species: str) -> str:
-    known = known_species()
-    folded = {name.casefold(): name for name in known}
-    hint = nearest(species, known)
-    if species.casefold() in folded:
-        hint = f"; nearest: {folded[species.casefold()]}"
-    return f"{species[:40]!r} is not a species known here{hint}"
+    return f"{show(species)} is not a species known here{nearest(species, known_species())}"
 
 
 def _take_analysis(

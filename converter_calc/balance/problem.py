@@ -7,7 +7,7 @@ same in all heats are kept as plain numbers, so that a long table costs little m
 from __future__ import annotations
 
 from collections.abc import Callable, Iterable, Mapping
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from typing import Any
 
 import numpy as np
@@ -62,6 +62,7 @@ class Problem:
     dust: Content
     scale_kg: Any
     elements: tuple[str, ...] = ()
+    cache: dict[Any, Any] = field(default_factory=dict, repr=False)
 
     def get(self, name: str) -> Num:
         """A value by flat name, or None where no heat gives it."""
@@ -100,6 +101,7 @@ class Problem:
             hot_metal_pct=pick_all(self.hot_metal_pct),
             hot_metal_J_kg=pick(self.hot_metal_J_kg),
             scale_kg=pick(self.scale_kg),
+            cache={},
         )
 
     @property

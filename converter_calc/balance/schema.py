@@ -139,8 +139,9 @@ def parse_shares(text: str) -> dict[str, float]:
 
 
 def nearest(word: str, names: Iterable[str]) -> str:
-    """`; nearest: <name>`, or nothing where no name is near."""
+    """`; nearest: <name>`, or nothing where no name is near. Case does not count."""
     import difflib
 
-    near = difflib.get_close_matches(word, list(names), n=1, cutoff=0.5)
-    return f"; nearest: {near[0]}" if near else ""
+    folded = {name.casefold(): name for name in names}
+    near = difflib.get_close_matches(word.casefold()[:80], list(folded), n=1, cutoff=0.5)
+    return f"; nearest: {folded[near[0]]}" if near else ""

@@ -5,6 +5,7 @@ from __future__ import annotations
 import csv
 import difflib
 import re
+from collections.abc import Iterator
 from functools import cache
 from importlib.resources import files
 
@@ -33,46 +34,53 @@ def atomic_weight(symbol: str) -> float:
     """
     weights = _atomic_weights()
     if symbol not in weights:
-        near = difflib.get_close_matches(symbol, weights, n=1)
+        near = difflib.get_close_matches(symbol.capitalize(), weights, n=1)
         hint = f"; did you mean {near[0]}?" if near else ""
         raise DataError(f"no atomic weight for element '{symbol}'{hint}")
     return weights[symbol]
 
 
-@cache
-def _parsed(formula: str) -> tuple[tuple[str, float], ...]:
-    def fail(why: str) -> DataError:
-        return DataError(f"'{formula}' is not a chemical formula: {why}")
+def _unreadable(formula: str, why: str) -> DataError:
+    return DataError(f"'{formula}' is not a chemical formula: {why}")
 
-    stack: list[dict[str, float]] = [{}]
+
+def _tokens(formula: str) -> Iterator[tuple[str, float, bool]]:
+    """Symbols and brackets with the number behind each, and whether one stands there."""
     place = 0
     while place < len(formula):
         token = _TOKEN.match(formula, place)
         if token is None:
-            raise fail(f"'{formula[place]}' at position {place + 1} is not expected")
+            why = f"'{formula[place]}' at position {place + 1} is not expected"
+            raise _unreadable(formula, why)
         symbol, number = token.group(1), token.group(2)
-        count = float(number) if number else 1.0
-        if count == 0.0:
-            raise fail(f"'{symbol}' is taken zero times")
+        if number and float(number) == 0.0:
+            raise _unreadable(formula, f"'{symbol}' is taken zero times")
+        yield symbol, float(number or 1.0), bool(number)
+        place = token.end()
+
+
+@cache
+def _parsed(formula: str) -> tuple[tuple[str, float], ...]:
+    stack: list[dict[str, float]] = [{}]
+    for symbol, count, numbered in _tokens(formula):
         if symbol == "(":
-            if number:
-                raise fail("a number follows an opening bracket")
+            if numbered:
+                raise _unreadable(formula, "a number follows an opening bracket")
             stack.append({})
         elif symbol == ")":
             if len(stack) == 1:
-                raise fail("a closing bracket has no opening one")
+                raise _unreadable(formula, "a closing bracket has no opening one")
             if not stack[-1]:
-                raise fail("a bracket is empty")
+                raise _unreadable(formula, "a bracket is empty")
             for element, atoms in stack.pop().items():
                 stack[-1][element] = stack[-1].get(element, 0.0) + atoms * count
         else:
             atomic_weight(symbol)
             stack[-1][symbol] = stack[-1].get(symbol, 0.0) + count
-        place = token.end()
     if len(stack) > 1:
-        raise fail("a bracket is not closed")
+        raise _unreadable(formula, "a bracket is not closed")
     if not stack[0]:
-        raise fail("it is empty")
+        raise _unreadable(formula, "it is empty")
     return tuple(stack[0].items())
 
 

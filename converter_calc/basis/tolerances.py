@@ -15,6 +15,6 @@ MOST_STEPS = 60
 MOST_HALVINGS = 6
 #: Heats solved together: few enough for the arrays to stay in cache, many enough to make
 #: the cost of a numpy call (about 0.5 microseconds) small beside its work.
-CHUNK = 4096
+CHUNK = 2048
 #: Width at which the two sides of a complementarity condition meet, dimensionless.
 CORNER = 1e-8

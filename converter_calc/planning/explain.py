@@ -40,12 +40,19 @@ class Explanation:
 
     def text(self) -> str:
         """The explanation as lines of text."""
-        lines = [f"{self.quantity}: {self.value:,.4g} {self.unit}", self.reason]
+        lines = [f"{self.quantity}: {number(self.value)} {self.unit}", self.reason]
         width = max((len(term.label) for term in self.terms), default=0)
         for term in self.terms:
-            line = f"  {term.label:<{width}}  {term.value:>12,.4g} {term.unit}"
+            line = f"  {term.label:<{width}}  {number(term.value):>10} {term.unit}".rstrip()
             lines.append(f"{line}   [{term.source}]" if term.source else line)
         return "\n".join(lines)
+
+
+def number(x: float) -> str:
+    """A number to read: no exponents, four digits or whole thousands."""
+    if abs(x) >= 1000.0:
+        return f"{x:,.0f}"
+    return f"{x:.4g}" if abs(x) >= 1e-3 or x == 0.0 else f"{x:.2e}"
 
 
 def source_of(law: str) -> str:

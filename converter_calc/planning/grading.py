@@ -5,6 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from converter_calc.balance.heats import HeatTable
+from converter_calc.basis.dual import Array
 from converter_calc.planning.grades import (
     ConverterAim,
     TrampCheck,
@@ -16,7 +17,7 @@ from converter_calc.planning.grades import (
     worst_element,
 )
 from converter_calc.planning.limits import mark_infeasible, still_open
-from converter_calc.planning.outcome import Outcome, spread
+from converter_calc.planning.outcome import Caution, Outcome, spread
 from converter_calc.planning.solving import with_values
 
 
@@ -53,19 +54,18 @@ def tramp_checks(outcome: Outcome, aim: ConverterAim) -> list[TrampCheck]:
     }
     total = sum(scrap.values(), np.zeros(outcome.n))
     limits = {el: pct for el, pct in aim.tramp_max.items() if el in s.metal_species_kg}
-    if not scrap or not limits or not (total > 0.0).all():
+    if not scrap or not limits:
         return []
     hot_metal = spread(s.hot_metal_kg, outcome.n)
-    stays = {
-        el: float(np.mean(np.asarray(s.metal_species_kg[el] / s.totals.of(el)))) for el in limits
-    }
     charge = total + hot_metal
+    none = total <= 0.0  # a heat without scrap: any shares that sum to one will do
+    whole = np.where(none, 1.0, total)
     return largest_fitting_share(
         {
             name: {el: 100.0 * outcome.p.contents[name].elements.get(el, 0.0) for el in limits}
             for name in scrap
         },
-        {name: kg / total for name, kg in scrap.items()},
+        {name: np.where(none, 1.0 / len(scrap), kg / whole) for name, kg in scrap.items()},
         total,
         charge,
         spread(s.metal_kg, outcome.n) / charge,
@@ -76,11 +76,18 @@ def tramp_checks(outcome: Outcome, aim: ConverterAim) -> list[TrampCheck]:
             / np.where(hot_metal > 0.0, hot_metal, 1.0)
             for el in limits
         },
-        stays_share=stays,
+        stays_share={el: _staying(outcome, el) for el in limits},
     )
 
 
-def _by_scrap(outcome: Outcome, scrap: dict[str, np.ndarray], element: str) -> np.ndarray:
+def _staying(outcome: Outcome, element: str) -> Array:
+    """Share of an element charged that the metal keeps, (n,)."""
+    charged = spread(outcome.state.totals.of(element), outcome.n)
+    kept = spread(outcome.state.metal_species_kg[element], outcome.n)
+    return np.where(charged > 0.0, kept / np.where(charged > 0.0, charged, 1.0), 1.0)
+
+
+def _by_scrap(outcome: Outcome, scrap: dict[str, Array], element: str) -> Array:
     return sum(
         (kg * outcome.p.contents[name].elements.get(element, 0.0) for name, kg in scrap.items()),
         np.zeros(outcome.n),
@@ -101,9 +108,38 @@ def judge_grade(outcome: Outcome) -> None:
             outcome,
             np.array([row]),
             lambda r, c=worst: f"tramp limit of grade {outcome.heats.grade}: {tell_tramp(c, r)}",
-            lambda r, c=worst: [
-                f"no more than {100.0 * c.fitting_share[r]:.2f} % of {c.offender[r]} in the mix",
-                f"scrap of this mix up to {100.0 * c.fitting_scrap_share[r]:.2f} % of the charge",
-                "a grade with a wider limit",
-            ],
+            lambda r, c=worst: _frees(c, r),
         )
+
+
+def _frees(check: TrampCheck, row: int) -> list[str]:
+    frees = []
+    if check.fits_when_cut[row]:
+        share = 100.0 * check.fitting_share[row]
+        frees.append(f"no more than {share:.2f} % of {check.offender[row]} in the mix")
+    whole = 100.0 * check.fitting_scrap_share[row]
+    frees.append(f"scrap of this mix up to {whole:.2f} % of the charge")
+    return [*frees, "a grade with a wider limit"]
+
+
+def grade_notes(outcome: Outcome) -> list[Caution]:
+    """What the grade has to say beside the aims: vacuum needed, carburiser, manganese."""
+    aim = aim_of(outcome.heats)
+    if aim is None:
+        return []
+    found = [
+        Caution("grade", "aim.grade", np.ones(1, dtype=bool), note.replace("{", "{{").replace("}", "}}"))
+        for note in aim.notes
+    ]
+    have = outcome.steel_pct().get("Mn")
+    if aim.Mn_pct is not None and have is not None:
+        found.append(
+            Caution(
+                "manganese-above-grade",
+                "aim.grade",
+                np.asarray(have) > aim.Mn_pct,
+                "the steel ends at {have:.3f} % Mn, above the {most:.3f} % that the grade leaves",
+                {"have": have, "most": aim.Mn_pct},
+            )
+        )
+    return found

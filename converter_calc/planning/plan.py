@@ -18,7 +18,7 @@ from converter_calc.balance.heats import (
 from converter_calc.basis.dual import Array
 from converter_calc.basis.errors import ConvergenceError, InfeasibleError
 from converter_calc.planning.cautions import cautions_of
-from converter_calc.planning.grading import judge_grade, with_grade_aims
+from converter_calc.planning.grading import grade_notes, judge_grade, with_grade_aims
 from converter_calc.planning.limits import judge
 from converter_calc.planning.outcome import Outcome
 from converter_calc.planning.solving import plan_groups, predict_groups, solve_heats
@@ -93,7 +93,7 @@ def solve_groups(
     for rows, group, ask in grouping(heats):
         outcome = solve_heats(group, ask)
         finish(outcome)
-        outcome.cautions = cautions_of(outcome)
+        outcome.cautions = [*cautions_of(outcome), *grade_notes(outcome)]
         yield rows, outcome
 
 
