@@ -177,8 +177,8 @@ MESSAGES = [
     ),
     ({"choice": {"lime": "lime"}}, "choice.lime: no material 'lime'; nearest: limestone"),
     (
-        {"choice": {"lime": "silicon_metal"}, "materials": {"silicon_metal": {"pct": {"Si": 99.8}}}},
-        "choice.lime: silicon_metal holds no Ca, so it cannot serve as lime",
+        {"choice": {"lime": "silicon"}, "materials": {"silicon": {"pct": {"Si": 99.8}}}},
+        "choice.lime: silicon holds no Ca, so it cannot serve as lime",
     ),
     (
         {"choice": {"magnesia_flux": "heavy_scrap"}},

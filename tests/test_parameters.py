@@ -1,13 +1,12 @@
-"""The parameter table, published heats as input, the demo heats. Kind of check: guards of the
+"""The parameter table, published heats as input. Kind of check: guards of the
 table, common practice (no source) for defaults, the named sources for published heats."""
 
 import math
-from pathlib import Path
 
 import numpy as np
 import pytest
 
-from converter_calc.balance.heats import heats_from_dict, read_heat_file
+from converter_calc.balance.heats import heats_from_dict
 from converter_calc.balance.schema import (
     allowed_texts,
     material_fields,
@@ -172,24 +171,3 @@ def test_published_heat_is_accepted_as_printed(name):
     assert table.warnings == []
     for key, number in document["pin"].items():
         assert table.values["pin_" + key][0] == number
-
-
-# ---- the demo shop and heats -------------------------------------------------------------
-
-
-def demo_files():
-    folder = Path(__file__).parents[1] / "demo_heats"
-    return [path for path in sorted(folder.glob("*.toml")) if path.name != "shop.toml"]
-
-
-@pytest.mark.parametrize("path", demo_files(), ids=lambda path: path.stem)
-def test_demo_heat_is_read_and_says_why(path):
-    table = read_heat_file(path)
-    assert len(table.why) > 30
-    assert table.warnings == []
-    assert np.isfinite(table.values["aim_C_pct"]).all()
-
-
-def test_at_least_six_demo_heats():
-    """Contract: six heats or more."""
-    assert len(demo_files()) >= 6

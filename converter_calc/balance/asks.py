@@ -5,16 +5,17 @@ Predict and every way of planning are rows of one table; the equations are the s
 
 from __future__ import annotations
 
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 
 from converter_calc.balance.closures import add_closures
-from converter_calc.balance.newton import Reach, Solved, Unknowns, solve
+from converter_calc.balance.newton import Reach, Unknowns
 from converter_calc.balance.problem import Problem
 from converter_calc.balance.state import State, evaluate
 from converter_calc.basis.dual import Array, Num
-from converter_calc.basis.tolerances import CHUNK
 from converter_calc.basis.units import ZERO_C_K
 
 
@@ -118,32 +119,14 @@ REACH = {
 }
 
 
-def solve_ask(p: Problem, ask: Ask, start: Unknowns | None = None) -> Solved:
-    """Solve all heats of `p` for what `ask` leaves open, chunk by chunk."""
-    start = first_guess(p, ask) if start is None else start
-    parts = []
-    for first in range(0, max(p.n, 1), CHUNK):
-        piece = slice(first, min(first + CHUNK, p.n))
-        part = p.take(piece)
-        guess = {name: values[piece] for name, values in start.items()}
-        parts.append(_solve_chunk(part, ask, guess))
-    return Solved(
-        {name: np.concatenate([part.unknowns[name] for part in parts]) for name in start},
-        np.concatenate([part.residual for part in parts]),
-        np.concatenate([part.steps for part in parts]),
-        np.concatenate([part.converged for part in parts]),
-    )
+def residual_of(p: Problem, ask: Ask) -> Callable[[Any, Mapping[str, Num]], list[Num]]:
+    """Residuals of some heats of p, by index; the heats last asked for are kept at hand."""
+    last: list[tuple[Any, Problem]] = [(None, p)]
 
-
-def _solve_chunk(p: Problem, ask: Ask, start: Unknowns) -> Solved:
-    everything = np.arange(p.n)
-    last: list[tuple[Array, Problem]] = [(everything, p)]
-
-    def residual(here: Array, x: dict[str, Num]) -> list[Num]:
+    def residual(here: Any, x: Mapping[str, Num]) -> list[Num]:
         if last[0][0] is not here:
-            taken = p if len(here) == p.n else p.take(here)
-            last[0] = (here, taken)
-        state = evaluate_ask(last[0][1], ask, x)
+            last[0] = (here, p if len(here) == p.n else p.take(here))
+        state = evaluate_ask(last[0][1], ask, dict(x))
         return [state.residuals[name] for name in ask.residuals]
 
-    return solve(residual, start, REACH, everything)
+    return residual

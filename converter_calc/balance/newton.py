@@ -165,8 +165,71 @@ def _damping(x: Unknowns, step: Sequence[Any], reach: Mapping[str, Reach]) -> Ar
     return share
 
 
+def follow(
+    residual: Residual,
+    x: Unknowns,
+    unit: Mapping[str, Any],
+    inverse: Sequence[Sequence[Any]],
+    indices: Array,
+    steps: int,
+) -> tuple[Unknowns, Array]:
+    """Quasi-Newton from an inverse Jacobian that is nearly right: values only, so quick.
+
+    Parameters
+    ----------
+    x : start, arrays (n,). unit : size of each unknown, numbers or (n,). inverse : entry
+    [u][r] is the change of unknown u (in its unit) by residual r, numbers or (n,).
+
+    Returns
+    -------
+    The best unknowns seen and their residual norm; what is not solved goes to `solve`.
+
+    Source: Broyden's first method in the form that keeps the steps instead of a matrix (C.T.
+    Kelley, Iterative Methods for Linear and Nonlinear Equations, SIAM 1995, ch. 7; from
+    memory).
+    """
+    names = list(x)
+    taken: list[list[Any]] = []
+    squares: list[Any] = []
+    best, least = x, np.full(indices.shape, np.inf)
+    with np.errstate(all="ignore"):
+        for _ in range(steps):
+            parts = residual(indices, x)
+            size = _norm([np.broadcast_to(part, indices.shape) for part in parts])
+            better = size < least
+            if better.all():
+                best, least = x, size
+            else:
+                best = {name: np.where(better, x[name], best[name]) for name in names}
+                least = np.where(better, size, least)
+            if (least <= RESIDUAL).all():
+                break
+            z = [-_dot(row, parts) for row in inverse]
+            for old, new, square in zip(taken, taken[1:], squares, strict=False):
+                along = _dot(old, z) / square
+                z = [a + along * b for a, b in zip(z, new, strict=True)]
+            if taken:
+                stretch = 1.0 / (1.0 - _dot(taken[-1], z) / squares[-1])
+                z = [a * stretch for a in z]
+            taken.append(z)
+            squares.append(_dot(z, z) + 1e-300)
+            x = {name: x[name] + a * unit[name] for name, a in zip(names, z, strict=True)}
+    return best, least
+
+
+def _dot(a: Sequence[Any], b: Sequence[Any]) -> Any:
+    total = a[0] * b[0]
+    for left, right in zip(a[1:], b[1:], strict=True):
+        total = total + left * right
+    return total
+
+
 def solve(
-    residual: Residual, start: Unknowns, reach: Mapping[str, Reach], indices: Array
+    residual: Residual,
+    start: Unknowns,
+    reach: Mapping[str, Reach],
+    indices: Array,
+    most_steps: int = MOST_STEPS,
 ) -> Solved:
     """Solve n systems of equal shape.
 
@@ -174,6 +237,7 @@ def solve(
     ----------
     residual : called with the indices of the heats still unsolved and their unknowns.
     start : first guess, arrays (n,). reach : limits of a step. indices : heats, (n,) ints.
+    most_steps : Jacobians before a heat is left as it stands.
 
     Returns
     -------
@@ -184,12 +248,12 @@ def solve(
     answer = {name: np.array(start[name], dtype=float) for name in names}
     norm_of, steps_of = np.full(n, np.inf), np.zeros(n, dtype=int)
     active = np.arange(n)
+    here = indices
     x = {name: answer[name].copy() for name in names}
     with np.errstate(all="ignore"):
-        for _ in range(MOST_STEPS):
+        for _ in range(most_steps):
             if not active.size:
                 break
-            here = indices[active]
             duals = residual(here, {name: ad.seed(x[name], name) for name in names})
             norm = _norm([np.broadcast_to(ad.value(r), active.shape) for r in duals])
             steps_of[active] += 1
@@ -202,6 +266,7 @@ def solve(
             done = (norm <= RESIDUAL) | ((norm <= RESIDUAL_STALLED) & stalled)
             if done.any():
                 active = active[~done]
+                here = indices[active]
                 x = {name: x[name][~done] for name in names}
     return Solved(answer, norm_of, steps_of, norm_of <= RESIDUAL_STALLED)
 

@@ -139,9 +139,12 @@ def parse_shares(text: str) -> dict[str, float]:
 
 
 def nearest(word: str, names: Iterable[str]) -> str:
-    """`; nearest: <name>`, or nothing where no name is near. Case does not count."""
+    """`; nearest: <name>`, or nothing where no name is near. Case, 0 and o do not count."""
     import difflib
 
-    folded = {name.casefold(): name for name in names}
-    near = difflib.get_close_matches(word.casefold()[:80], list(folded), n=1, cutoff=0.5)
+    def fold(text: str) -> str:
+        return text.casefold().replace("0", "o")
+
+    folded = {fold(name): name for name in names if name}
+    near = difflib.get_close_matches(fold(word[:80]), list(folded), n=1, cutoff=0.5)
     return f"; nearest: {folded[near[0]]}" if near else ""

@@ -12,6 +12,15 @@ class Fault(NamedTuple):
     field: str
     message: str
 
+    def line(self) -> str:
+        """`field: message` on one line, whatever characters the user's names hold."""
+        text = f"{self.field[:200]}: {self.message}"
+        return text if text.isprintable() else "".join(map(_printable, text))
+
+
+def _printable(sign: str) -> str:
+    return sign if sign.isprintable() else ascii(sign)[1:-1]
+
 
 class ConverterError(Exception):
     """Any error that the package raises on purpose."""
@@ -22,7 +31,7 @@ class InputError(ConverterError):
 
     def __init__(self, faults: Iterable[Fault]) -> None:
         self.faults = list(faults)
-        super().__init__("\n".join(f"{fault.field}: {fault.message}" for fault in self.faults))
+        super().__init__("\n".join(fault.line() for fault in self.faults))
 
 
 class DataError(ConverterError):

@@ -11,6 +11,12 @@ RESIDUAL_STALLED = 1e-10
 CLOSURE = 1e-9
 #: Newton steps before a heat is given up. Ordinary heats need 5 to 8.
 MOST_STEPS = 60
+#: Newton steps in a chunk before what is left is put aside and solved together.
+QUICK_STEPS = 4
+#: Rows from which a table is solved from a sample of its own heats: the sample and its fit
+#: cost about as much as 1500 heats by Newton. FOLLOWED_STEPS: most steps from there.
+SAMPLED_FROM = 6000
+FOLLOWED_STEPS = 9
 #: Halvings of one Newton step before it is taken all the same.
 MOST_HALVINGS = 6
 #: Heats solved together: few enough for the arrays to stay in cache, many enough to make

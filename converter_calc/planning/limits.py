@@ -14,6 +14,7 @@ from typing import Any
 import numpy as np
 
 from converter_calc.balance.asks import Ask
+from converter_calc.balance.closures import basicity_margin, lime_limit, phosphorus_margin
 from converter_calc.balance.heats import HeatTable
 from converter_calc.basis.dual import Array
 from converter_calc.basis.units import ZERO_C_K
@@ -22,6 +23,8 @@ from converter_calc.planning.solving import solve_heats, with_masses, with_value
 
 #: A limit counts as broken beyond this share of it: rounding, not practice.
 SLACK = 1e-7
+#: An aim counts as what sets the lime within this relative distance of it.
+AT_AIM = 1e-4
 
 
 def judge(outcome: Outcome) -> None:
@@ -70,54 +73,84 @@ def end_point_of(outcome: Outcome, index: int) -> dict[str, float]:
 
 def _judge_unsolved(outcome: Outcome) -> None:
     """Heats without a solution: is it the lime that cannot dissolve any further?"""
-    rows = np.flatnonzero(~outcome.converged)
-    if not rows.size:
-        return
-    for row in rows.tolist():
+    for row in np.flatnonzero(~outcome.converged).tolist():
         outcome.status[row] = "not converged"
         outcome.binding[row] = "the equations of this heat have no solution that was found"
         outcome.frees[row] = ["check the inputs and pins of this heat against ordinary practice"]
     if not outcome.ask.lime:
         return
+    rows = np.flatnonzero(~outcome.converged | lime_in_vain(outcome))
+    if not rows.size:
+        return
     most = solve_heats(outcome.heats.take(rows), replace(outcome.ask, lime_rule="lime_limit"))
-    P = spread(most.steel_pct().get("P", 0.0), rows.size)
-    B = spread(most.state.basicity, rows.size)
-    aim_P, aim_B = most.heats.values["aim_P_pct"], most.heats.values["aim_basicity"]
-    for place in np.flatnonzero(most.converged).tolist():
-        row = int(rows[place])
-        one = most.heats.take(np.array([place]))
-        if P[place] > aim_P[place]:
-            mark_infeasible(
-                outcome,
-                np.array([row]),
-                lambda _, k=place: (
-                    f"phosphorus: at the most lime that dissolves the steel ends at "
-                    f"{P[k]:.4f} % P, the aim is {aim_P[k]:.4f} % P"
-                ),
-                lambda _: [
-                    "a lower tapping temperature",
-                    "more iron oxide in the slag (lower end carbon, softer blow)",
-                    "two slags, or hot metal treated for phosphorus before",
-                    "less phosphorus in hot metal and scrap",
-                ],
-                _pick(most, one, place),
-            )
-        elif B[place] < aim_B[place]:
-            mark_infeasible(
-                outcome,
-                np.array([row]),
-                lambda _, k=place: (
-                    f"basicity: lime stops dissolving at CaO/SiO2 = {B[k]:.2f}, "
-                    f"the least asked for is {aim_B[k]:.2f}"
-                ),
-                lambda _: ["a lower aim.basicity", "more fluid slag (more iron oxide)"],
-                _pick(most, one, place),
-            )
+    by_basicity = solve_heats(with_values(most.heats, aim_P_pct=np.nan), outcome.ask)
+    for place, row in enumerate(rows.tolist()):
+        _judge_lime(outcome, row, most, by_basicity, place)
 
 
-def _pick(outcome: Outcome, one: HeatTable, place: int) -> Outcome:
+def lime_in_vain(outcome: Outcome) -> Array:
+    """Heats in which the phosphorus aim asks for lime that does not dissolve any more, (n,) bool.
+
+    Such lime holds no phosphorus back; it only cools and takes the place of scrap.
+    """
+    p, n = outcome.p, outcome.n
+    aim = outcome.heats.values["aim_P_pct"]
+    if not np.isfinite(aim).any() or "P" not in outcome.state.metal_species_kg:
+        return np.zeros(n, dtype=bool)
+    with np.errstate(invalid="ignore"):
+        by_P = np.abs(spread(phosphorus_margin(p, outcome.state), n)) < AT_AIM
+        beyond = spread(lime_limit(p, outcome.x, outcome.state), n) > 0.0
+        above = spread(basicity_margin(p, outcome.state), n) > AT_AIM
+    pinned = np.isfinite(outcome.heats.values["pin_basicity"])
+    pinned |= np.isfinite(outcome.heats.values["pin_slag_CaO_pct"])
+    return outcome.converged & by_P & beyond & above & ~pinned
+
+
+def _judge_lime(
+    outcome: Outcome, row: int, most: Outcome, by_basicity: Outcome, place: int
+) -> None:
+    """One heat against the most lime that dissolves: phosphorus or basicity out of reach?"""
+    if not most.converged[place]:
+        return
+    P, B = (float(at(x, place)) for x in (most.steel_pct().get("P", 0.0), most.state.basicity))
+    aim_P, aim_B = (float(most.heats.values[k][place]) for k in ("aim_P_pct", "aim_basicity"))
+    best = most
+    if by_basicity.converged[place]:
+        other = float(at(by_basicity.steel_pct().get("P", 0.0), place))
+        if other < P:
+            best, P = by_basicity, other
+    if aim_P < P:
+        mark_infeasible(
+            outcome,
+            np.array([row]),
+            lambda _: (
+                f"phosphorus (aim.P_pct): at the most lime that dissolves the steel ends at "
+                f"{P:.4f} % P, the aim is {aim_P:.4f} % P"
+            ),
+            lambda _: [
+                "a lower tapping temperature",
+                "more iron oxide in the slag (lower end carbon, softer blow)",
+                "two slags, or hot metal treated for phosphorus before",
+                "less phosphorus in hot metal and scrap",
+            ],
+            _alone(best, place),
+        )
+    elif aim_B > B and not outcome.converged[row]:
+        mark_infeasible(
+            outcome,
+            np.array([row]),
+            lambda _: (
+                f"basicity (aim.basicity): lime stops dissolving at CaO/SiO2 = {B:.2f}, "
+                f"the least asked for is {aim_B:.2f}"
+            ),
+            lambda _: ["a lower aim.basicity", "more fluid slag (more iron oxide)"],
+            _alone(most, place),
+        )
+
+
+def _alone(outcome: Outcome, place: int) -> Outcome:
     """One heat of an outcome, solved again alone."""
-    return solve_heats(one, outcome.ask)
+    return solve_heats(outcome.heats.take(np.array([place])), outcome.ask)
 
 
 def _let_temperature_go(outcome: Outcome, rows: Array, scrap_kg: Any) -> Outcome:

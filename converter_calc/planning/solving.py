@@ -7,9 +7,10 @@ from typing import Any
 
 import numpy as np
 
-from converter_calc.balance.asks import Ask, evaluate_ask, solve_ask
+from converter_calc.balance.asks import Ask, evaluate_ask
 from converter_calc.balance.heats import HeatTable
 from converter_calc.balance.problem import build_problem
+from converter_calc.balance.solving import solve_ask
 from converter_calc.basis.dual import Array
 from converter_calc.basis.errors import Fault, InputError
 from converter_calc.planning.outcome import Outcome

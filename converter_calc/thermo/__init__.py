@@ -1,0 +1,1 @@
+"""Enthalpies: pure species, elements in liquid iron, molten slag."""

@@ -19,11 +19,11 @@ import numpy as np
 from converter_calc.basis.dual import Array, Dual, Num
 from converter_calc.basis.elements import molar_mass
 from converter_calc.basis.errors import DataError
+from converter_calc.basis.units import T_REF_K
 from converter_calc.data.tables import read_csv_rows
 
 Phase: TypeAlias = Literal["stable", "s", "l", "g", "top solid"]
 PHASES = ("stable", "s", "l", "g", "top solid")
-T_REFERENCE_K = 298.15
 #: Columns of data/species.csv, as powers of T (None: logarithm).
 _TERMS: tuple[tuple[str, float | None], ...] = (
     *(("h_inv", -1.0), ("h_ln", None), ("h_0", 0.0), ("h_1", 1.0), ("h_2", 2.0)),
@@ -232,7 +232,7 @@ class EnthalpySet:
         T = np.asarray(T_K, dtype=float)
         count = len(self.species)
         both = np.empty((2 * count, *T.shape)) if out is None else out
-        self._calculate(T.reshape(-1), both.reshape(2 * count, -1), slopes=True)
+        self._calculate(T.reshape(-1), both.reshape(2 * count, T.size), slopes=True)
         return both[:count], both[count:]
 
     def evaluate_dual(self, T_K: Num) -> list[Num]:
@@ -245,14 +245,15 @@ class EnthalpySet:
             return [T_K.chain(h[i], cp[i]) for i in range(len(self.species))]
         T = np.asarray(T_K, dtype=float)
         h = np.empty((len(self.species), *T.shape))
-        self._calculate(T.reshape(-1), h.reshape(len(self.species), -1), slopes=False)
+        self._calculate(T.reshape(-1), h.reshape(len(self.species), T.size), slopes=False)
         return [h[i] for i in range(len(self.species))]
 
     def _calculate(self, T: Array, out: Array, *, slopes: bool) -> None:
         if out.size == 0:
             return
-        ends = np.searchsorted(self._edges, (T.min(), T.max()), side="right")
-        if ends[0] == ends[1]:
+        coldest, hottest = T.min(), T.max()  # both NaN if one is
+        ends = np.searchsorted(self._edges, (coldest, hottest), side="right")
+        if ends[0] == ends[1] and coldest <= hottest:
             self._interval(int(ends[0])).write(T, out, slopes=slopes)
             return
         where = np.searchsorted(self._edges, T, side="right")
@@ -314,4 +315,4 @@ def formation_enthalpy_J_mol(species: str) -> float:
 
     Zero for the elements. Raises DataError for an unknown species. Source: data/species.csv.
     """
-    return float(enthalpy_J_mol(species, T_REFERENCE_K))
+    return float(enthalpy_J_mol(species, T_REF_K))

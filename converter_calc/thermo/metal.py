@@ -7,9 +7,9 @@ from functools import cache
 
 from converter_calc.basis.dual import Num
 from converter_calc.basis.elements import atomic_weight
+from converter_calc.basis.units import T_REF_K
 from converter_calc.data.tables import read_csv_rows
 from converter_calc.thermo.enthalpy import (
-    T_REFERENCE_K,
     EnthalpySet,
     Phase,
     known_species,
@@ -55,10 +55,11 @@ class MetalEnthalpy:
         members: list[tuple[str, Phase]] = []
         offsets: list[float] = []
         for name in self.elements:
+            kg_mol = atomic_weight(name) * 1e-3
             if name in _heats():
                 reference, phase, heat = _heats()[name]
                 members.append((reference, phase))
-                offsets.append(heat / (atomic_weight(name) * 1e-3))
+                offsets.append(heat / kg_mol)
             elif name in known_species():
                 members.append((name, _liquid_or_last(name)))
                 offsets.append(0.0)
@@ -76,5 +77,5 @@ class MetalEnthalpy:
         for name in self.elements:
             if name not in h:
                 cp = DULONG_PETIT_J_MOL_K / (atomic_weight(name) * 1e-3)
-                h[name] = (T_K - T_REFERENCE_K) * cp
+                h[name] = (T_K - T_REF_K) * cp
         return h

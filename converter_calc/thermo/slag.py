@@ -18,7 +18,8 @@ from converter_calc.basis import dual as ad
 from converter_calc.basis.dual import Dual, Num
 from converter_calc.basis.elements import molar_mass
 from converter_calc.basis.errors import DataError
-from converter_calc.thermo.enthalpy import T_REFERENCE_K, EnthalpySet, Phase
+from converter_calc.basis.units import T_REF_K
+from converter_calc.thermo.enthalpy import EnthalpySet, Phase
 from converter_calc.thermo.scratch import Scratch
 from converter_calc.thermo.slag_compounds import compound_heat_J, heat_and_slopes, slag_constant
 
@@ -88,7 +89,7 @@ class SlagEnthalpy:
     def __init__(self, oxides: Sequence[str]) -> None:
         self.oxides = tuple(oxides)
         names = [STANDS_FOR.get(name, name) for name in oxides]
-        solid, _ = EnthalpySet([(name, "s") for name in names]).evaluate(T_REFERENCE_K)
+        solid, _ = EnthalpySet([(name, "s") for name in names]).evaluate(T_REF_K)
         self._formation_J_kg = dict(zip(self.oxides, (float(h) for h in solid), strict=True))
         self._row = {name: row for row, name in enumerate(self.oxides)}
         fusion = slag_constant("fusion") * 1e3
@@ -105,7 +106,8 @@ class SlagEnthalpy:
         plain = {name: ad.value(mass) for name, mass in kg.items()}
         heat, slopes = heat_and_slopes(plain)
         T = np.asarray(ad.value(T_K), dtype=float)
-        store = _SCRATCH.array(2 * len(self.oxides), T.size).reshape(-1, *T.shape)
+        rows = 2 * len(self.oxides)
+        store = _SCRATCH.array(rows, T.size).reshape(rows, *T.shape)
         h, cp = self._molten.evaluate(T, out=store)
         total, by_T, d = _Sum(heat), _Sum(), dict[str, _Sum]()
         for name, mass in kg.items():
