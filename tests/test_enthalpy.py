@@ -262,8 +262,8 @@ def test_scalar_list_array_nan_empty() -> None:
     T = [250.0, 298.15, 1000.0, 1500.0, 1900.0, 7000.0]
     loop = [enthalpy_J_kg("Fe", x) for x in T]
     assert all(isinstance(x, float) for x in loop)
-    np.testing.assert_allclose(enthalpy_J_kg("Fe", T), loop, rtol=1e-13)
-    np.testing.assert_allclose(enthalpy_J_kg("Fe", np.array(T)), loop, rtol=1e-13)
+    np.testing.assert_allclose(enthalpy_J_kg("Fe", T), loop, rtol=1e-13, atol=1e-6)
+    np.testing.assert_allclose(enthalpy_J_kg("Fe", np.array(T)), loop, rtol=1e-13, atol=1e-6)
     with_nan = enthalpy_J_kg("Fe", np.array([1000.0, np.nan, 1900.0]))
     assert np.isnan(with_nan).tolist() == [False, True, False]
     assert np.isnan(enthalpy_J_kg("Fe", float("nan")))
@@ -275,7 +275,7 @@ def test_scalar_list_array_nan_empty() -> None:
 
 
 def test_long_table_equals_short_ones() -> None:
-    """Property: the blocks of a long table join without a seam."""
+    """Property: each row of a long table is what it is alone."""
     T = np.linspace(300.0, 2500.0, 20_011)
     gases = EnthalpySet([(gas, "stable") for gas in ("CO", "CO2", "H2", "H2O", "N2", "Fe")])
     h, cp = gases.evaluate(T)

@@ -17,7 +17,7 @@ from converter_calc.balance.schema import material_fields, number_names, section
 from converter_calc.basis.errors import ConverterError
 
 RELAXED = settings(
-    max_examples=200,
+    max_examples=120,
     deadline=None,
     suppress_health_check=[HealthCheck.function_scoped_fixture, HealthCheck.too_slow],
 )

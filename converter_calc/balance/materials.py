@@ -110,7 +110,8 @@ def compile_material(name: str, fields: Mapping[str, Any]) -> Material:
     if faults:
         raise InputError(faults)
     total = math.fsum(weighed.values())
-    species = {formula: part / total for formula, part in weighed.items() if part > 0.0}
+    shares = {formula: part / total for formula, part in weighed.items()}
+    species = {formula: share for formula, share in shares.items() if share > 0.0}
     return Material(
         name=name,
         kind=kind,

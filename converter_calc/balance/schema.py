@@ -15,8 +15,6 @@ from converter_calc.data.tables import read_csv_rows, read_toml
 
 #: Bounds of an element of the hot metal that has no row of its own, mass %.
 OTHER_ELEMENT_PCT = (0.0, 10.0)
-#: Sections whose keys are not fixed, beside those of the table.
-OPEN_SECTIONS = ("hot_metal", "charge")
 
 
 @dataclass(frozen=True)

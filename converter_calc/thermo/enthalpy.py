@@ -23,6 +23,8 @@ from converter_calc.basis.units import T_REF_K
 from converter_calc.data.tables import read_csv_rows
 
 Phase: TypeAlias = Literal["stable", "s", "l", "g", "top solid"]
+#: Where liquid metal and slag are followed in one piece [K]: hot metal to the hottest tap.
+STEELMAKING_K = (1700.0, 2200.0)
 PHASES = ("stable", "s", "l", "g", "top solid")
 #: Columns of data/species.csv, as powers of T (None: logarithm).
 _TERMS: tuple[tuple[str, float | None], ...] = (
@@ -32,8 +34,6 @@ _TERMS: tuple[tuple[str, float | None], ...] = (
 #: Functions of t = T / 1000 K in which both H and its derivative are written.
 _BASIS: tuple[float | None, ...] = (0.0, 1.0, 2.0, 3.0, 4.0, 5.0, None, -1.0, -2.0, 0.5, -0.5)
 _HIGHEST_POWER = 5
-#: Multiplications below which OpenBLAS does not split a product over threads (2**18).
-_ONE_THREAD = 200_000
 _KILO = 1000.0
 
 
@@ -178,15 +178,11 @@ class _Interval:
     def write(self, T_K: Array, out: Array, *, slopes: bool) -> None:
         """Write H, or H and below it cp, of all species at T (n,) into `out`.
 
-        The product is made in blocks so small that the linear algebra library stays on one
-        thread: waking another costs more than these thin products, by far on a busy machine.
+        Not by `@`: for so thin a product the linear algebra library wakes a second thread,
+        which may cost a hundred times the work, or takes a slow path on one.
         """
         a = self.both if slopes else self.h
-        width = max(1, _ONE_THREAD // a.size)
-        for start in range(0, T_K.size, width):
-            block = slice(start, start + width)
-            basis = _basis_values(T_K[block], self.columns)
-            np.matmul(a, basis, out=out[:, block])
+        np.einsum("ij,jk->ik", a, _basis_values(T_K, self.columns), out=out)
 
 
 class EnthalpySet:
@@ -199,12 +195,18 @@ class EnthalpySet:
         chosen the heat capacity is constant at its value there (a supercooled liquid, a
         superheated solid, a compound hotter than its table).
     offsets_J_kg : added to the enthalpy of each member, [J/kg]; none if not given.
+    whole : temperatures [K] between which each member follows one segment, that of the middle,
+        past its end if it ends between them. A set that is only used for one fixed phase each
+        then has no kinks there, and one product serves all heats.
 
     Raises DataError for an unknown species or a phase without data.
     """
 
     def __init__(
-        self, members: Sequence[tuple[str, Phase]], offsets_J_kg: Sequence[float] | None = None
+        self,
+        members: Sequence[tuple[str, Phase]],
+        offsets_J_kg: Sequence[float] | None = None,
+        whole: tuple[float, float] | None = None,
     ) -> None:
         self.species = tuple(name for name, _ in members)
         self._parts = [segments_of(name, phase) for name, phase in members]
@@ -213,6 +215,9 @@ class EnthalpySet:
         edges = {
             T for parts in self._parts for part in parts for T in (part.T_low_K, part.T_high_K)
         }
+        self._middle = None if whole is None else 0.5 * (whole[0] + whole[1])
+        if whole is not None:
+            edges = {T for T in edges if not whole[0] < T < whole[1]} | set(whole)
         self._edges = np.array(sorted(edges))
         self._intervals: dict[int, _Interval] = {}
 
@@ -270,6 +275,9 @@ class EnthalpySet:
 
     def _build(self, index: int) -> _Interval:
         low = self._edges[index - 1] if index > 0 else -np.inf
+        high = self._edges[index] if index < self._edges.size else np.inf
+        if self._middle is not None and low <= self._middle < high:
+            low = self._middle
         h, cp = [], []
         for parts, kg_mol in zip(self._parts, self._kg_mol, strict=True):
             if low < parts[0].T_low_K:

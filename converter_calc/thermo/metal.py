@@ -10,6 +10,7 @@ from converter_calc.basis.elements import atomic_weight
 from converter_calc.basis.units import T_REF_K
 from converter_calc.data.tables import read_csv_rows
 from converter_calc.thermo.enthalpy import (
+    STEELMAKING_K,
     EnthalpySet,
     Phase,
     known_species,
@@ -66,7 +67,7 @@ class MetalEnthalpy:
         self._with_data = tuple(
             name for name in self.elements if name in _heats() or name in known_species()
         )
-        self._set = EnthalpySet(members, offsets)
+        self._set = EnthalpySet(members, offsets, STEELMAKING_K)
 
     def evaluate_dual(self, T_K: Num) -> dict[str, Num]:
         """Enthalpy of each dissolved element [J/kg of the element] at T [K].

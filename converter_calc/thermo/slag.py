@@ -19,7 +19,7 @@ from converter_calc.basis.dual import Dual, Num
 from converter_calc.basis.elements import molar_mass
 from converter_calc.basis.errors import DataError
 from converter_calc.basis.units import T_REF_K
-from converter_calc.thermo.enthalpy import EnthalpySet, Phase
+from converter_calc.thermo.enthalpy import STEELMAKING_K, EnthalpySet, Phase
 from converter_calc.thermo.scratch import Scratch
 from converter_calc.thermo.slag_compounds import compound_heat_J, heat_and_slopes, slag_constant
 
@@ -94,7 +94,7 @@ class SlagEnthalpy:
         self._row = {name: row for row, name in enumerate(self.oxides)}
         fusion = slag_constant("fusion") * 1e3
         hot: list[tuple[str, Phase]] = [(name, "top solid") for name in names]
-        self._molten = EnthalpySet(hot, [fusion] * len(hot))
+        self._molten = EnthalpySet(hot, [fusion] * len(hot), STEELMAKING_K)
 
     def enthalpy_J(self, kg: Mapping[str, Num], T_K: Num) -> Num:
         """Enthalpy of the slag [J], equal to `slag_enthalpy_J` with the oxides at T_K.
