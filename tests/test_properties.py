@@ -46,9 +46,7 @@ tables = st.lists(
     min_size=ROWS,
     max_size=ROWS,
 ).map(pd.DataFrame)
-quick = settings(
-    max_examples=8, deadline=None, suppress_health_check=[HealthCheck.too_slow]
-)
+quick = settings(max_examples=8, deadline=None, suppress_health_check=[HealthCheck.too_slow])
 
 
 def table_of(frame: pd.DataFrame) -> HeatTable:
@@ -169,9 +167,7 @@ def test_the_lime_property_is_not_empty() -> None:
 def test_scaling_every_mass_scales_every_extensive_result(frame: pd.DataFrame, k: float) -> None:
     """The heat lost per minute belongs to the vessel, so it is scaled along."""
     vessel = frame.assign(heat_loss_MJ_per_min=60.0)
-    big = vessel.assign(
-        hot_metal_kg=vessel["hot_metal_kg"] * k, heat_loss_MJ_per_min=60.0 * k
-    )
+    big = vessel.assign(hot_metal_kg=vessel["hot_metal_kg"] * k, heat_loss_MJ_per_min=60.0 * k)
     big["hot_metal_kg"] = big["hot_metal_kg"].clip(upper=6e5)
     factor = (big["hot_metal_kg"] / vessel["hot_metal_kg"]).to_numpy()
     big["heat_loss_MJ_per_min"] = 60.0 * factor

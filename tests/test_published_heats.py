@@ -334,4 +334,6 @@ def test_hand_method_scrap() -> None:
     melted = scrap["scrap_total_kg"]
     compare([("scrap melted, kg", melted, hand["scrap_melted_kg"], 37.99, 38.5)])
     # kJ per kg of scrap: the method heats it to 1.459 MJ/kg; ours also makes some slag of it
-    assert left / melted == pytest.approx(taken["left_for_scrap"] / hand["scrap_melted_kg"], rel=0.02)
+    assert left / melted == pytest.approx(
+        taken["left_for_scrap"] / hand["scrap_melted_kg"], rel=0.02
+    )

@@ -5,9 +5,7 @@ Predict and every way of planning are rows of one table; the equations are the s
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
 from dataclasses import dataclass
-from typing import Any
 
 import numpy as np
 
@@ -117,16 +115,3 @@ REACH = {
     "T_K": Reach(step=250.0, low=1200.0, high=2900.0),
     "hot_metal_kg": Reach(share=0.6, low=0.0),
 }
-
-
-def residual_of(p: Problem, ask: Ask) -> Callable[[Any, Mapping[str, Num]], list[Num]]:
-    """Residuals of some heats of p, by index; the heats last asked for are kept at hand."""
-    last: list[tuple[Any, Problem]] = [(None, p)]
-
-    def residual(here: Any, x: Mapping[str, Num]) -> list[Num]:
-        if last[0][0] is not here:
-            last[0] = (here, p if len(here) == p.n else p.take(here))
-        state = evaluate_ask(last[0][1], ask, dict(x))
-        return [state.residuals[name] for name in ask.residuals]
-
-    return residual

@@ -8,14 +8,13 @@ still pay (Shamanskii's modification, Ukrain. Mat. Zh. 19 (1967) 118; from memor
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
-from typing import Any
+from typing import Any, Protocol
 
 import numpy as np
 
-from converter_calc.basis import dual as ad
-from converter_calc.basis.dual import Array, Num
+from converter_calc.basis.dual import Array
 from converter_calc.basis.tolerances import (
     MOST_HALVINGS,
     MOST_STEPS,
@@ -24,9 +23,17 @@ from converter_calc.basis.tolerances import (
 )
 
 Unknowns = dict[str, Array]
-#: residual(selection, unknowns) -> residuals, one a closure, in order.
-Residual = Callable[[Any, Mapping[str, Num]], Sequence[Num]]
 Matrix = list[list[Any]]
+
+
+class Equations(Protocol):
+    """What the solver needs: residuals of some heats, and their Jacobian."""
+
+    def residuals(self, rows: Any, x: Mapping[str, Array]) -> list[Any]:
+        """Residuals of the heats `rows`, one a closure, in order."""
+
+    def jacobian(self, rows: Any, x: Mapping[str, Array]) -> tuple[list[Any], Matrix]:
+        """Residuals and the derivative of each by each unknown; 0.0 where there is none."""
 
 
 @dataclass(frozen=True)
@@ -105,11 +112,6 @@ def dense(J: Matrix, n: int) -> Array:
     return full
 
 
-def jacobian(residuals: Sequence[Num], names: Sequence[str]) -> Matrix:
-    """Derivative of each residual by each unknown."""
-    return [[ad.slope(residual, name) for name in names] for residual in residuals]
-
-
 def _norm(residuals: Sequence[Any]) -> Array:
     size = np.abs(residuals[0])
     for residual in residuals[1:]:
@@ -117,11 +119,10 @@ def _norm(residuals: Sequence[Any]) -> Array:
     return np.asarray(np.where(np.isfinite(size), size, np.inf))
 
 
-def newton_step(residuals: Sequence[Num], names: Sequence[str], n: int) -> tuple[list[Any], Any]:
-    """Full Newton step of n heats: (step a unknown, function that solves again)."""
-    J = jacobian(residuals, names)
+def newton_step(residuals: Sequence[Any], J: Matrix, n: int) -> tuple[list[Any], Any]:
+    """Full Newton step of n heats: (step a unknown, factors to step with again)."""
     A, inverse, trouble = factorise(J)
-    rhs = [-ad.value(residual) for residual in residuals]
+    rhs = [-residual for residual in residuals]
     step = substitute(A, inverse, rhs)
     bad = np.flatnonzero(np.broadcast_to(trouble, (n,)))
     if bad.size:
@@ -166,7 +167,7 @@ def _damping(x: Unknowns, step: Sequence[Any], reach: Mapping[str, Reach]) -> Ar
 
 
 def follow(
-    residual: Residual,
+    equations: Equations,
     x: Unknowns,
     unit: Mapping[str, Any],
     inverse: Sequence[Sequence[Any]],
@@ -194,7 +195,7 @@ def follow(
     best, least = x, np.full(indices.shape, np.inf)
     with np.errstate(all="ignore"):
         for _ in range(steps):
-            parts = residual(indices, x)
+            parts = equations.residuals(indices, x)
             size = _norm([np.broadcast_to(part, indices.shape) for part in parts])
             better = size < least
             if better.all():
@@ -225,7 +226,7 @@ def _dot(a: Sequence[Any], b: Sequence[Any]) -> Any:
 
 
 def solve(
-    residual: Residual,
+    equations: Equations,
     start: Unknowns,
     reach: Mapping[str, Reach],
     indices: Array,
@@ -235,7 +236,7 @@ def solve(
 
     Parameters
     ----------
-    residual : called with the indices of the heats still unsolved and their unknowns.
+    equations : asked with the indices of the heats still unsolved and their unknowns.
     start : first guess, arrays (n,). reach : limits of a step. indices : heats, (n,) ints.
     most_steps : Jacobians before a heat is left as it stands.
 
@@ -254,11 +255,11 @@ def solve(
         for _ in range(most_steps):
             if not active.size:
                 break
-            duals = residual(here, {name: ad.seed(x[name], name) for name in names})
-            norm = _norm([np.broadcast_to(ad.value(r), active.shape) for r in duals])
+            values, J = equations.jacobian(here, x)
+            norm = _norm([np.broadcast_to(r, active.shape) for r in values])
             steps_of[active] += 1
-            step, factors = newton_step(duals, names, active.size)
-            x, norm = _advance(residual, here, x, step, norm, reach, factors)
+            step, factors = newton_step(values, J, active.size)
+            x, norm = _advance(equations, here, x, step, norm, reach, factors)
             for name in names:
                 answer[name][active] = x[name]
             stalled = norm >= norm_of[active]
@@ -272,7 +273,7 @@ def solve(
 
 
 def _advance(
-    residual: Residual,
+    equations: Equations,
     here: Array,
     x: Unknowns,
     step: Sequence[Any],
@@ -284,7 +285,7 @@ def _advance(
     names = list(x)
     share = _damping(x, step, reach)
     new = {name: x[name] + share * move for name, move in zip(names, step, strict=True)}
-    parts = residual(here, new)
+    parts = equations.residuals(here, new)
     size = _norm([np.broadcast_to(part, here.shape) for part in parts])
     for _ in range(MOST_HALVINGS):
         worse = np.flatnonzero(size > norm)
@@ -295,7 +296,7 @@ def _advance(
             name: x[name][worse] + share[worse] * np.broadcast_to(move, here.shape)[worse]
             for name, move in zip(names, step, strict=True)
         }
-        again = residual(here[worse], some)
+        again = equations.residuals(here[worse], some)
         size[worse] = _norm([np.broadcast_to(part, worse.shape) for part in again])
         for name in names:
             new[name][worse] = some[name]
@@ -307,7 +308,7 @@ def _advance(
             break
         move = substitute(*factors, [-part for part in parts])
         trial = {name: new[name] + d for name, d in zip(names, move, strict=True)}
-        further = residual(here, trial)
+        further = equations.residuals(here, trial)
         reached = _norm([np.broadcast_to(part, here.shape) for part in further])
         better = reached < 0.3 * size
         if not better.any():

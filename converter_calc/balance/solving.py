@@ -14,11 +14,11 @@ from typing import Any
 
 import numpy as np
 
-from converter_calc.balance.asks import REACH, Ask, evaluate_ask, first_guess, residual_of
-from converter_calc.balance.newton import Solved, Unknowns, dense, follow, jacobian, solve
+from converter_calc.balance.asks import REACH, Ask, first_guess
+from converter_calc.balance.newton import Solved, Unknowns, dense, follow, solve
 from converter_calc.balance.problem import Problem
-from converter_calc.basis import dual as ad
-from converter_calc.basis.dual import Array, Num
+from converter_calc.balance.system import System
+from converter_calc.basis.dual import Array
 from converter_calc.basis.tolerances import (
     CHUNK,
     FOLLOWED_STEPS,
@@ -54,18 +54,14 @@ def solve_ask(p: Problem, ask: Ask) -> Solved:
     """
     n = p.n
     guess = first_guess(p, ask)
+    system = System(p, ask)
     solved = Solved(guess, np.full(n, np.inf), np.zeros(n, dtype=int), np.zeros(n, dtype=bool))
-    if n >= SAMPLED_FROM:
-        sample = _sample(p, ask, guess)
-        for first in range(0, n if sample else 0, CHUNK):
-            rows = slice(first, min(first + CHUNK, n))
-            assert sample is not None
-            part = p.take(rows)
-            x, unit, inverse = sample.predict(part)
-            index = np.arange(part.n)
-            x, residual = follow(
-                residual_of(part, ask), x, unit, inverse, index, FOLLOWED_STEPS
-            )
+    fit = _sample(system, guess) if n >= SAMPLED_FROM else None
+    if fit is not None:
+        for first in range(0, n, CHUNK):
+            rows = np.arange(first, min(first + CHUNK, n))
+            x, unit, inverse = fit.predict(p.take(slice(rows[0], rows[-1] + 1)))
+            x, residual = follow(system, x, unit, inverse, rows, FOLLOWED_STEPS)
             for name in guess:
                 solved.unknowns[name][rows] = x[name]
             solved.residual[rows] = residual
@@ -73,15 +69,14 @@ def solve_ask(p: Problem, ask: Ask) -> Solved:
     for steps in (QUICK_STEPS, MOST_STEPS):
         left = np.flatnonzero(~solved.converged)
         for first in range(0, left.size, CHUNK):
-            rows = left[first : first + CHUNK]
-            _solve_rows(p.take(rows) if rows.size < n else p, ask, solved, rows, steps)
+            _solve_rows(system, solved, left[first : first + CHUNK], steps)
     return solved
 
 
-def _solve_rows(p: Problem, ask: Ask, solved: Solved, rows: Array, most_steps: int) -> None:
+def _solve_rows(system: System, solved: Solved, rows: Array, most_steps: int) -> None:
     """Newton for some rows, from where they stand; put into `solved`."""
     begin = {name: x[rows] for name, x in solved.unknowns.items()}
-    found = solve(residual_of(p, ask), begin, REACH, np.arange(rows.size), most_steps)
+    found = solve(system, begin, REACH, rows, most_steps)
     for name, x in found.unknowns.items():
         solved.unknowns[name][rows] = x
     solved.residual[rows] = found.residual
@@ -153,42 +148,39 @@ def _quadratic(z: Array) -> Array:
     return np.hstack([np.ones((n, 1)), z, *crossed])
 
 
-def _sample(p: Problem, ask: Ask, guess: Unknowns) -> _Fit | None:
+def _sample(system: System, guess: Unknowns) -> _Fit | None:
     """Solve some heats of the table and fit them; None where that is not possible."""
+    p = system.p
     inputs = _inputs(p)
     if inputs is None:
         return None
     d = inputs.shape[1]
     size = 3 * (1 + 2 * d if d > MOST_CROSSED else (d + 1) * (d + 2) // 2)
     rows = np.unique(np.linspace(0, p.n - 1, min(max(size, 64), p.n // 4)).astype(int))
-    some = p.take(rows)
     begin = {name: x[rows] for name, x in guess.items()}
-    solved = solve(residual_of(some, ask), begin, REACH, np.arange(rows.size), QUICK_STEPS * 2)
+    solved = solve(system, begin, REACH, rows, QUICK_STEPS * 2)
     good = np.flatnonzero(solved.converged)
     if good.size < max(16, rows.size // 2):
         return None
-    some = some.take(good)
+    rows = rows[good]
     x = {name: values[good] for name, values in solved.unknowns.items()}
-    unit = units_of(some, x)
+    unit = units_of(p.take(rows), x)
     deviation = inputs.std(axis=0)
     deviation[deviation == 0.0] = 1.0
     mean = inputs.mean(axis=0)
-    z = _standard(inputs[rows][good], mean, deviation)
+    z = _standard(inputs[rows], mean, deviation)
     answers = np.stack([values / unit[name] for name, values in x.items()], axis=1)
     answer = np.linalg.lstsq(_quadratic(z), answers, rcond=1e-10)[0]
-    inverses = _inverse_jacobians(some, ask, x, unit)
+    inverses = _inverse_jacobians(system, rows, x, unit)
     flat = np.hstack([np.ones((good.size, 1)), z])
     inverse = np.linalg.lstsq(flat, inverses.reshape(good.size, -1), rcond=1e-10)[0]
     return _Fit(tuple(x), mean, deviation, answer, inverse)
 
 
-def _inverse_jacobians(p: Problem, ask: Ask, x: Unknowns, unit: dict[str, Any]) -> Array:
+def _inverse_jacobians(system: System, rows: Array, x: Unknowns, unit: dict[str, Any]) -> Array:
     """d(unknown in its unit) / d(residual) at x, (n, k, k)."""
-    seeded: dict[str, Num] = {name: ad.seed(values, name) for name, values in x.items()}
     with np.errstate(all="ignore"):
-        state = evaluate_ask(p, ask, seeded)
-        rows = jacobian([state.residuals[name] for name in ask.residuals], ask.unknowns)
-    full = dense(rows, p.n)
-    for c, name in enumerate(ask.unknowns):
-        full[:, :, c] *= np.broadcast_to(unit[name], (p.n,))[:, None]
+        full = dense(system.jacobian(rows, x)[1], rows.size)
+    for c, name in enumerate(x):
+        full[:, :, c] *= np.broadcast_to(unit[name], (rows.size,))[:, None]
     return np.linalg.pinv(np.nan_to_num(full))

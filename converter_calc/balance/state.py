@@ -16,8 +16,6 @@ from collections.abc import Mapping
 from dataclasses import dataclass, field
 from functools import cache
 
-import numpy as np
-
 from converter_calc.balance.charge import SLAG_OXIDES, Totals, oxide_factor, slag_enthalpy
 from converter_calc.balance.problem import SHARED, TO_DUST, TO_SLAG, Problem, given_totals
 from converter_calc.basis import dual as ad
@@ -234,12 +232,11 @@ def _add_scrap(p: Problem, scrap: Num, s: State) -> None:
 
 def _add_oxygen(p: Problem, s: State) -> None:
     """Blown oxygen with its argon and nitrogen."""
-    given, totals = p.values, s.totals
+    totals = s.totals
     for gas, (kg_per_Nm3, J_per_Nm3) in oxygen_content(p).items():
         s.oxygen_kg[gas] = s.oxygen_Nm3 * kg_per_Nm3
         totals.add_element("O" if gas == "O2" else gas.rstrip("2"), s.oxygen_kg[gas])
-        if np.any(np.asarray(given["oxygen_temp_C"]) != 25.0):
-            totals.enthalpy_J = totals.enthalpy_J + s.oxygen_Nm3 * J_per_Nm3
+        totals.enthalpy_J = totals.enthalpy_J + s.oxygen_Nm3 * J_per_Nm3
 
 
 def oxygen_content(p: Problem) -> dict[str, tuple[Num, Num]]:

@@ -19,8 +19,12 @@ SAMPLED_FROM = 6000
 FOLLOWED_STEPS = 9
 #: Halvings of one Newton step before it is taken all the same.
 MOST_HALVINGS = 6
-#: Heats solved together: few enough for the arrays to stay in cache, many enough to make
-#: the cost of a numpy call (about 0.5 microseconds) small beside its work.
-CHUNK = 2048
+#: Heats worked on at once when a recorded formula is replayed: small enough for its buffers
+#: to stay in the second-level cache, large enough to make a numpy call (about 0.4
+#: microseconds) small beside its work. With derivatives there are more buffers.
+BLOCK = 2048
+BLOCK_WITH_SLOPES = 1024
+#: Heats that go through the solver together.
+CHUNK = 8192
 #: Width at which the two sides of a complementarity condition meet, dimensionless.
 CORNER = 1e-8

@@ -74,8 +74,9 @@ def _pressure(p_CO_atm: Num | None, blowing: str) -> Num:
     default = effective_pressure_atm(blowing)
     if p_CO_atm is None:
         return default
-    missing = np.isnan(ad.value(p_CO_atm))
-    return ad.where(missing, default, p_CO_atm) if np.any(missing) else p_CO_atm
+    if isinstance(p_CO_atm, float | int):
+        return default if np.isnan(p_CO_atm) else p_CO_atm
+    return ad.where(np.isnan(ad.value(p_CO_atm)), default, p_CO_atm)
 
 
 def saturated_oxygen_pct(T_K: Num, law: str = "taylor_chipman") -> Num:

@@ -97,7 +97,8 @@ def lime_curve(heats: HeatTable, lime_kg: Any, laws: Sequence[str] | None = None
         group, ask = _asked(_with_law(table, law))
         outcome = solve_heats(group, ask)
         parts.append(pd.DataFrame(_lime_columns(outcome, law, lime, chosen)))
-    return pd.concat(parts, ignore_index=True)
+    curve: pd.DataFrame = pd.concat(parts, ignore_index=True)
+    return curve
 
 
 def lime_lines(heats: HeatTable, laws: Sequence[str] | None = None) -> LimeLines:
@@ -235,17 +236,19 @@ def _lime_of(heats: HeatTable, ask: Ask) -> float:
 
 def _lime_for_aim(free: HeatTable, ask: Ask) -> float:
     """Lime at which one law just meets the P aim [kg]; NaN where none does."""
-    low_B = parameters()["aim_basicity"].low
-    solved = solve_heats(with_values(free, aim_basicity=low_B), ask)
-    if solved.converged[0] and not lime_in_vain(solved)[0]:
-        return float(solved.x["lime_kg"][0])
+    # where even the most lime leaves too much, Newton would only wander
     most = solve_heats(free, replace(ask, lime_rule="lime_limit"))
     aim = free.values["aim_P_pct"][0]
     if not most.converged[0] or float(np.ravel(most.steel_pct()["P"])[0]) > aim:
         return np.nan
+    low_B = parameters()["aim_basicity"].low
+    solved = solve_heats(with_values(free, aim_basicity=low_B), ask)
+    if solved.converged[0] and not lime_in_vain(solved)[0]:
+        return float(solved.x["lime_kg"][0])
 
     def excess(outcome: Outcome) -> Array:
-        return spread(outcome.steel_pct()["P"], outcome.n) - aim
+        excess_pct: Array = spread(outcome.steel_pct()["P"], outcome.n) - aim
+        return excess_pct
 
     return _crossing(free, excess, float(most.x["lime_kg"][0]))
 

@@ -19,6 +19,7 @@ import numpy as np
 from converter_calc.basis.dual import Array, Dual, Num
 from converter_calc.basis.elements import molar_mass
 from converter_calc.basis.errors import DataError
+from converter_calc.basis.tape import Trace
 from converter_calc.basis.units import T_REF_K
 from converter_calc.data.tables import read_csv_rows
 
@@ -221,7 +222,7 @@ class EnthalpySet:
         self._edges = np.array(sorted(edges))
         self._intervals: dict[int, _Interval] = {}
 
-    def evaluate(self, T_K: Any, out: Array | None = None) -> tuple[Array, Array]:
+    def evaluate(self, T_K: Any, out: Array | None = None) -> tuple[Any, Any]:
         """Enthalpy [J/kg of formula] and heat capacity [J/(kg K)] of each species.
 
         Parameters
@@ -234,8 +235,11 @@ class EnthalpySet:
         h, cp : arrays (species, n); (species,) for a number. cp is the exact derivative of
         h by T (at a transition, that of the phase above).
         """
-        T = np.asarray(T_K, dtype=float)
         count = len(self.species)
+        if isinstance(T_K, Trace):
+            rows = T_K.tape.rows(self._with_slopes, 2 * count, T_K)
+            return rows[:count], rows[count:]
+        T = np.asarray(T_K, dtype=float)
         both = np.empty((2 * count, *T.shape)) if out is None else out
         self._calculate(T.reshape(-1), both.reshape(2 * count, T.size), slopes=True)
         return both[:count], both[count:]
@@ -248,10 +252,18 @@ class EnthalpySet:
         if isinstance(T_K, Dual):
             h, cp = self.evaluate(T_K.v)
             return [T_K.chain(h[i], cp[i]) for i in range(len(self.species))]
+        if isinstance(T_K, Trace):
+            return T_K.tape.rows(self._without_slopes, len(self.species), T_K)
         T = np.asarray(T_K, dtype=float)
         h = np.empty((len(self.species), *T.shape))
         self._calculate(T.reshape(-1), h.reshape(len(self.species), T.size), slopes=False)
         return [h[i] for i in range(len(self.species))]
+
+    def _with_slopes(self, T: Array, out: Array) -> None:
+        self._calculate(T, out, slopes=True)
+
+    def _without_slopes(self, T: Array, out: Array) -> None:
+        self._calculate(T, out, slopes=False)
 
     def _calculate(self, T: Array, out: Array, *, slopes: bool) -> None:
         if out.size == 0:
@@ -310,7 +322,7 @@ def enthalpy_J_kg(species: str, T_K: Num, phase: Phase = "stable") -> Num:
     unknown species or phase. Source: data/species.csv.
     """
     (h,) = _single(species, phase)[0].evaluate_dual(T_K)
-    return float(h) if not isinstance(h, Dual) and np.ndim(h) == 0 else h
+    return float(h) if isinstance(h, np.ndarray | np.generic) and h.ndim == 0 else h
 
 
 def enthalpy_J_mol(species: str, T_K: Num, phase: Phase = "stable") -> Num:

@@ -18,6 +18,7 @@ from converter_calc.basis import dual as ad
 from converter_calc.basis.dual import Dual, Num
 from converter_calc.basis.elements import molar_mass
 from converter_calc.basis.errors import DataError
+from converter_calc.basis.tape import Trace
 from converter_calc.basis.units import T_REF_K
 from converter_calc.thermo.enthalpy import STEELMAKING_K, EnthalpySet, Phase
 from converter_calc.thermo.scratch import Scratch
@@ -105,10 +106,7 @@ class SlagEnthalpy:
         _check_set_up(kg, self._row)
         plain = {name: ad.value(mass) for name, mass in kg.items()}
         heat, slopes = heat_and_slopes(plain)
-        T = np.asarray(ad.value(T_K), dtype=float)
-        rows = 2 * len(self.oxides)
-        store = _SCRATCH.array(rows, T.size).reshape(rows, *T.shape)
-        h, cp = self._molten.evaluate(T, out=store)
+        h, cp = self._at(ad.value(T_K))
         total, by_T, d = _Sum(heat), _Sum(), dict[str, _Sum]()
         for name, mass in kg.items():
             row = self._row[name]
@@ -123,6 +121,15 @@ class SlagEnthalpy:
             for key, inner in T_K.d.items():
                 d.setdefault(key, _Sum()).add(inner, by_T.total)
         return Dual(total.total, {key: part.total for key, part in d.items()}) if d else total.total
+
+    def _at(self, T_K: Any) -> tuple[Any, Any]:
+        """Enthalpy and heat capacity of the molten oxides, in memory that is used again."""
+        if isinstance(T_K, Trace):
+            return self._molten.evaluate(T_K)
+        T = np.asarray(T_K, dtype=float)
+        rows = 2 * len(self.oxides)
+        store = _SCRATCH.array(rows, T.size).reshape(rows, *T.shape)
+        return self._molten.evaluate(T, out=store)
 
     def formation_J(self, kg: Mapping[str, Num]) -> Num:
         """Heat of formation of the slag at 25 °C [J]: oxides and compounds, without fusion.
