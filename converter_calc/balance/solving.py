@@ -2,7 +2,7 @@
 
 A long table is solved in two goes. A sample of its heats is solved by Newton with exact
 derivatives. A quadratic through their answers then predicts the answer of every heat to
-about a part in a thousand, a linear fit its inverse Jacobian, and a few quasi-Newton steps
+about a part in a thousand, and its inverse Jacobian, and a few quasi-Newton steps
 without derivatives bring it to the same tolerance. What is left, and every short table,
 goes through Newton; so the sample decides how long it takes, never what comes out.
 """
@@ -20,7 +20,9 @@ from converter_calc.balance.problem import Problem
 from converter_calc.balance.system import System
 from converter_calc.basis.dual import Array
 from converter_calc.basis.tolerances import (
+    BLOCK,
     CHUNK,
+    FITTED_FROM,
     FOLLOWED_STEPS,
     MOST_STEPS,
     QUICK_STEPS,
@@ -46,8 +48,10 @@ MOST_CROSSED = 24
 OUTLIER = 4.0
 
 
-def solve_ask(p: Problem, ask: Ask) -> Solved:
+def solve_ask(p: Problem, ask: Ask, fits: Fits | None = None) -> Solved:
     """Solve all heats of `p` for what `ask` leaves open.
+
+    fits : samples of earlier parts of the same table, used again and added to.
 
     Returns unknowns, residual norm, Jacobians used and convergence of each heat; nothing is
     raised for a heat that does not converge, and it does not touch its neighbours.
@@ -56,7 +60,7 @@ def solve_ask(p: Problem, ask: Ask) -> Solved:
     guess = first_guess(p, ask)
     system = System(p, ask)
     solved = Solved(guess, np.full(n, np.inf), np.zeros(n, dtype=int), np.zeros(n, dtype=bool))
-    fit = _sample(system, guess) if n >= SAMPLED_FROM else None
+    fit = _fit_for(system, guess, {} if fits is None else fits)
     if fit is not None:
         for first in range(0, n, CHUNK):
             rows = np.arange(first, min(first + CHUNK, n))
@@ -71,6 +75,16 @@ def solve_ask(p: Problem, ask: Ask) -> Solved:
         for first in range(0, left.size, CHUNK):
             _solve_rows(system, solved, left[first : first + CHUNK], steps)
     return solved
+
+
+def _fit_for(system: System, guess: Unknowns, fits: Fits) -> Fit | None:
+    """A fit that suits these heats, from earlier ones or from a sample of these."""
+    key = (system.ask, _varying(system.p))
+    if key not in fits and system.n >= SAMPLED_FROM:
+        found = _sample(system, guess)
+        if found is not None:
+            fits[key] = found
+    return fits.get(key) if system.n >= FITTED_FROM else None
 
 
 def _solve_rows(system: System, solved: Solved, rows: Array, most_steps: int) -> None:
@@ -92,69 +106,81 @@ def units_of(p: Problem, names: Any) -> dict[str, Any]:
     }
 
 
+def _varying(p: Problem) -> tuple[str, ...]:
+    """Names of the inputs that differ between the heats."""
+    return tuple(
+        f"{part}:{name}"
+        for part in ("values", "fixed", "hot_metal_pct")
+        for name, x in getattr(p, part).items()
+        if isinstance(x, np.ndarray) and x.ndim and (part, name) != ("hot_metal_pct", "Fe")
+    )
+
+
 def _inputs(p: Problem) -> Array | None:
-    """Inputs that differ between the heats, a column each (n, d); None where one has gaps."""
-    columns = [
-        x
-        for group in (p.values, p.fixed, {k: v for k, v in p.hot_metal_pct.items() if k != "Fe"})
-        for x in group.values()
-        if isinstance(x, np.ndarray) and x.ndim and x.size > 1
-    ]
-    if not columns:
-        return np.zeros((p.n, 0))
-    table = np.stack(columns, axis=1)
+    """These inputs, a row each (d, n); None where one has gaps."""
+    rows = []
+    for place in _varying(p):
+        part, name = place.split(":", 1)
+        rows.append(getattr(p, part)[name])
+    table = np.stack(rows) if rows else np.zeros((0, p.n))
     return table if np.isfinite(table).all() else None
 
 
 @dataclass
-class _Fit:
+class Fit:
     """Answers of a sample as functions of the inputs.
 
-    mean, deviation : of the inputs (d,). answer : coefficients of the quadratic (m, k).
-    inverse : coefficients of the linear fit of the inverse Jacobian (1 + d, k * k).
+    mean, deviation : of the inputs (d,). coefficients : of the quadratics in the inputs,
+    first those of the k answers, then those of the inverse Jacobian (k + k * k, m).
     """
 
     names: tuple[str, ...]
     mean: Array
     deviation: Array
-    answer: Array
-    inverse: Array
+    coefficients: Array
 
     def predict(self, p: Problem) -> tuple[Unknowns, dict[str, Any], list[list[Any]]]:
         """Start, units and inverse Jacobian of all heats of p."""
-        inputs = _inputs(p)
-        if inputs is None or inputs.shape[1] != self.mean.size:
-            inputs = np.broadcast_to(self.mean, (p.n, self.mean.size))
-        z = _standard(inputs, self.mean, self.deviation)
-        unit = units_of(p, self.names)
-        found = (self.answer.T @ _quadratic(z).T) if z.size else self.answer.T @ np.ones((1, p.n))
-        x = {name: found[k] * unit[name] for k, name in enumerate(self.names)}
         count = len(self.names)
-        entries = self.inverse.T @ np.vstack([np.ones(p.n), z.T])
-        inverse = [[entries[u * count + r] for r in range(count)] for u in range(count)]
+        inputs = _inputs(p)
+        both = np.empty((count + count * count, p.n))
+        for first in range(0, p.n, BLOCK):
+            rows = slice(first, first + BLOCK)
+            if inputs is None:
+                z = np.zeros((self.mean.size, both[:, rows].shape[1]))
+            else:
+                z = _standard(inputs[:, rows], self.mean, self.deviation)
+            np.matmul(self.coefficients, _quadratic(z), out=both[:, rows])
+        unit = units_of(p, self.names)
+        x = {name: both[k] * unit[name] for k, name in enumerate(self.names)}
+        inverse = [[both[count * (1 + u) + r] for r in range(count)] for u in range(count)]
         return x, unit, inverse
 
 
+#: Fits by ask and names of the inputs that vary.
+Fits = dict[Any, Fit]
+
+
 def _standard(inputs: Array, mean: Array, deviation: Array) -> Array:
-    return np.asarray(np.clip((inputs - mean) / deviation, -OUTLIER, OUTLIER))
+    z = (inputs - mean[:, None]) / deviation[:, None]
+    return np.asarray(np.clip(z, -OUTLIER, OUTLIER))
 
 
 def _quadratic(z: Array) -> Array:
-    """1, all inputs, all products of two (squares only where there are many), (n, m)."""
-    n, d = z.shape
+    """1, all inputs, all products of two (squares only where there are many), (m, n)."""
+    d, n = z.shape
     if d > MOST_CROSSED:
-        return np.hstack([np.ones((n, 1)), z, z * z])
-    crossed = [z[:, k : k + 1] * z[:, k:] for k in range(d)]
-    return np.hstack([np.ones((n, 1)), z, *crossed])
+        return np.concatenate([np.ones((1, n)), z, z * z])
+    return np.concatenate([np.ones((1, n)), z, *(z[k] * z[k:] for k in range(d))])
 
 
-def _sample(system: System, guess: Unknowns) -> _Fit | None:
+def _sample(system: System, guess: Unknowns) -> Fit | None:
     """Solve some heats of the table and fit them; None where that is not possible."""
     p = system.p
     inputs = _inputs(p)
     if inputs is None:
         return None
-    d = inputs.shape[1]
+    d = inputs.shape[0]
     size = 3 * (1 + 2 * d if d > MOST_CROSSED else (d + 1) * (d + 2) // 2)
     rows = np.unique(np.linspace(0, p.n - 1, min(max(size, 64), p.n // 4)).astype(int))
     begin = {name: x[rows] for name, x in guess.items()}
@@ -165,16 +191,13 @@ def _sample(system: System, guess: Unknowns) -> _Fit | None:
     rows = rows[good]
     x = {name: values[good] for name, values in solved.unknowns.items()}
     unit = units_of(p.take(rows), x)
-    deviation = inputs.std(axis=0)
+    mean, deviation = inputs.mean(axis=1), inputs.std(axis=1)
     deviation[deviation == 0.0] = 1.0
-    mean = inputs.mean(axis=0)
-    z = _standard(inputs[rows], mean, deviation)
+    terms = _quadratic(_standard(inputs[:, rows], mean, deviation)).T
     answers = np.stack([values / unit[name] for name, values in x.items()], axis=1)
-    answer = np.linalg.lstsq(_quadratic(z), answers, rcond=1e-10)[0]
-    inverses = _inverse_jacobians(system, rows, x, unit)
-    flat = np.hstack([np.ones((good.size, 1)), z])
-    inverse = np.linalg.lstsq(flat, inverses.reshape(good.size, -1), rcond=1e-10)[0]
-    return _Fit(tuple(x), mean, deviation, answer, inverse)
+    inverses = _inverse_jacobians(system, rows, x, unit).reshape(good.size, -1)
+    coefficients = np.linalg.lstsq(terms, np.hstack([answers, inverses]), rcond=1e-10)[0]
+    return Fit(tuple(x), mean, deviation, np.ascontiguousarray(coefficients.T))
 
 
 def _inverse_jacobians(system: System, rows: Array, x: Unknowns, unit: dict[str, Any]) -> Array:

@@ -12,9 +12,10 @@ heat_loss_J.
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, field
 from functools import cache
+from typing import Any
 
 from converter_calc.balance.charge import SLAG_OXIDES, Totals, oxide_factor, slag_enthalpy
 from converter_calc.balance.problem import SHARED, TO_DUST, TO_SLAG, Problem, given_totals
@@ -33,8 +34,9 @@ from converter_calc.laws import (
     sulphur,
 )
 from converter_calc.laws.slag_measures import FetO_pct, total_iron_pct
-from converter_calc.thermo.enthalpy import EnthalpySet, enthalpy_J_kg
+from converter_calc.thermo.enthalpy import STEELMAKING_K, EnthalpySet, enthalpy_J_kg, heat_of
 from converter_calc.thermo.metal import MetalEnthalpy
+from converter_calc.thermo.slag_compounds import compound_heat_J
 
 GASES = ("CO", "CO2", "H2", "H2O", "N2", "Ar", "SO2", "O2")
 #: Rounding of the corner where lime stops dissolving, as a share of the slag mass.
@@ -505,56 +507,63 @@ def gas_enthalpies() -> EnthalpySet:
 
 
 @cache
-def _metal(elements: tuple[str, ...]) -> MetalEnthalpy:
-    """Enthalpies of elements in liquid iron, built once."""
-    return MetalEnthalpy(elements)
-
-
-@cache
-def _solid_lime() -> EnthalpySet:
-    return EnthalpySet([("CaO", "s")])
+def _bath_set(elements: tuple[str, ...], oxides: tuple[str, ...]) -> EnthalpySet:
+    """Elements in the metal, oxides of the slag and solid lime, at the end temperature."""
+    metal, slag = MetalEnthalpy(elements), slag_enthalpy(oxides)
+    members = [*metal.members, *slag.members, ("CaO", "top solid")]
+    return EnthalpySet(members, [*metal.offsets_J_kg, *slag.offsets_J_kg, 0.0], STEELMAKING_K)
 
 
 @cache
 def _gas_and_dust_set(dust: tuple[str, ...]) -> EnthalpySet:
     """Gases and dust at the temperature of the gas; dust without jumps at transitions."""
     solids = [("P4O10" if name == "P2O5" else name, "top solid") for name in dust]
-    return EnthalpySet([*((name, "stable") for name in GASES), *solids])
-
-
-def _weighed(kg: Mapping[str, Num], h: Mapping[str, Num]) -> Num:
-    return sum(kg[name] * h[name] for name in kg)
+    members = [*((name, "stable") for name in GASES), *solids]
+    return EnthalpySet(members, None, STEELMAKING_K)
 
 
 def _heat(p: Problem, x: Mapping[str, Num], s: State) -> None:
     """Enthalpies of all outputs and the energy residual."""
     given, H = p.values, s.enthalpy_J
-    oxides = tuple(name for name in SLAG_OXIDES if name in s.slag_species_kg)
-    h = _metal(tuple(s.metal_species_kg)).evaluate_dual(s.T_K)
-    H["metal"] = _weighed(s.metal_species_kg, h)
-    H["slag"] = slag_enthalpy(oxides).enthalpy_J(s.slag_species_kg, s.T_K)
-    H["undissolved"] = s.undissolved_kg * _solid_lime().evaluate_dual(s.T_K)[0]
+    metal, slag = s.metal_species_kg, s.slag_species_kg
+    oxides = tuple(name for name in SLAG_OXIDES if name in slag)
+    h, cp = _bath_set(tuple(metal), oxides).at(s.T_K)
+    H["metal"] = _heat_rows(metal.values(), s.T_K, h, cp, 0)
+    H["slag"] = _heat_rows([slag[name] for name in oxides], s.T_K, h, cp, len(metal))
+    H["slag"] = H["slag"] + compound_heat_J(slag)
+    H["undissolved"] = _heat_rows([s.undissolved_kg], s.T_K, h, cp, len(metal) + len(oxides))
 
     start = given["hot_metal_temp_C"] + ZERO_C_K
     base = start + given["gas_path_share"] * (s.T_K - start)
     if "pin_off_gas_temp_C" in given:
         base = p.pinned("off_gas_temp_C", lambda: base - ZERO_C_K) + ZERO_C_K
     s.gas_base_K = base
-    found = _gas_and_dust_set(tuple(s.dust_kg)).evaluate_dual(base)
-    h = dict(zip(GASES, found, strict=False))
-    H["gas"] = _weighed(s.gas_kg, h)
-    M = {name: molar_mass(name) * 1e-3 for name in ("CO", "CO2", "O2")}
-    per_mol = h["CO"] * M["CO"] + h["O2"] * (0.5 * M["O2"]) - h["CO2"] * M["CO2"]
-    s.post_combustion_J = s.laws["post_burnt_C_kg"] * (1e3 / molar_mass("C")) * per_mol
+    h, cp = _gas_and_dust_set(tuple(s.dust_kg)).at(base)
+    H["gas"] = _heat_rows([s.gas_kg[gas] for gas in GASES], base, h, cp, 0)
+    H["dust"] = _heat_rows(s.dust_kg.values(), base, h, cp, len(GASES))
+    # CO + 1/2 O2 = CO2 at the temperature of the gas, per kg of carbon
+    moles = {"CO": 1.0, "O2": 0.5, "CO2": -1.0}
+    carbon = s.laws["post_burnt_C_kg"]
+    parts = [
+        carbon * (moles.get(gas, 0.0) * molar_mass(gas) / molar_mass("C")) if gas in moles else 0.0
+        for gas in GASES
+    ]
+    s.post_combustion_J = _heat_rows(parts, base, h, cp, 0)
     leaves = 1.0 - given["post_combustion_heat_share_pct"] * 0.01
     if p.mask("pin_off_gas_temp_C") is not False:
         leaves = ad.where(p.mask("pin_off_gas_temp_C"), 0.0, leaves)
     H["gas"] = H["gas"] + s.post_combustion_J * leaves
-    H["dust"] = _weighed(s.dust_kg, dict(zip(s.dust_kg, found[len(GASES) :], strict=True)))
 
     out = H["metal"] + H["slag"] + H["undissolved"] + H["gas"] + H["dust"]
     s.heat_loss_J = x["heat_loss_J"] if "heat_loss_J" in x else heat_loss_J(p, s)
     s.residuals["heat"] = (s.totals.enthalpy_J - out - s.heat_loss_J) / (p.scale_kg * MJ)
+
+
+def _heat_rows(kg: Iterable[Num], T_K: Num, h: Any, cp: Any, first: int) -> Num:
+    """Heat of some masses whose enthalpies stand in the rows from `first` on."""
+    masses = list(kg)
+    rows = slice(first, first + len(masses))
+    return heat_of(masses, T_K, h[rows], None if cp is None else cp[rows])
 
 
 def heat_loss_J(p: Problem, s: State) -> Num:

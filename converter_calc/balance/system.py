@@ -11,7 +11,7 @@ import numpy as np
 from converter_calc.balance.asks import Ask, evaluate_ask
 from converter_calc.balance.problem import Problem
 from converter_calc.basis.dual import Array, Dual, Num
-from converter_calc.basis.tape import Program, Tape, Trace
+from converter_calc.basis.tape import Program, Tape, Trace, steady_name
 from converter_calc.basis.tolerances import BLOCK, BLOCK_WITH_SLOPES
 
 Matrix = list[list[Any]]
@@ -79,11 +79,23 @@ class System:
     def _program(self, *, slopes: bool) -> Program:
         if slopes not in self._programs:
             tape, outputs = _record(self.p, self.ask, slopes=slopes)
-            block = BLOCK_WITH_SLOPES if slopes else BLOCK
-            self._programs[slopes] = Program(tape, outputs, max(1, min(block, self.n)))
+            block = max(1, min(BLOCK_WITH_SLOPES if slopes else BLOCK, self.n))
+            if not slopes and self.n > 1:
+                tape = self._set_apart(tape, outputs, block)
+            self._programs[slopes] = Program(tape, outputs, block)
         return self._programs[slopes]
 
+    def _set_apart(self, tape: Tape, outputs: list[Any], block: int) -> Tape:
+        """Work out once what no unknown moves; the tape that is left to replay."""
+        rest, steady = tape.split(["x:" + name for name in self.ask.unknowns], outputs)
+        found = Program(tape, steady, block).run(self._arrays, self.n)
+        for quantity, x in zip(steady, found, strict=True):
+            self._arrays[steady_name(quantity.index)] = x
+        self._rows = None
+        return rest
+
     def _run(self, rows: Any, x: Mapping[str, Array], *, slopes: bool) -> list[Any]:
+        program = self._program(slopes=slopes)
         if self._rows is not rows:
             whole = not isinstance(rows, slice) and len(rows) == self.n
             self._taken = {
@@ -92,7 +104,7 @@ class System:
             self._rows = rows
         inputs = self._taken | {"x:" + name: values for name, values in x.items()}
         size = len(next(iter(x.values())))
-        return self._program(slopes=slopes).run(inputs, size)
+        return program.run(inputs, size)
 
     def residuals(self, rows: Any, x: Mapping[str, Array]) -> list[Any]:
         """Residuals of some heats (indices or slice), one array (n,) a closure."""

@@ -126,6 +126,27 @@ class Tape:
         block = self._add((function, count), (x.index,))
         return [Trace(self, self._add(("row", k), (block,))) for k in range(count)]
 
+    def split(self, varying: Sequence[str], outputs: Sequence[Any]) -> tuple[Tape, list[Trace]]:
+        """Set apart what does not depend on the inputs `varying`.
+
+        Returns a tape in which such quantities, where others need them, are inputs themselves,
+        named `steady_name`, and the list of these quantities on this tape.
+        """
+        moves = set()
+        for index, (function, arguments) in enumerate(self.nodes):
+            if function in varying if isinstance(function, str) else bool(moves & set(arguments)):
+                moves.add(index)
+        wanted = {x.index for x in outputs if isinstance(x, Trace) and x.index not in moves}
+        for index in moves:
+            wanted |= {a for a in self.nodes[index][1] if isinstance(a, int) and a not in moves}
+        steady = sorted(i for i in wanted if not isinstance(self.nodes[i][0], str))
+        rest = Tape()
+        rest.nodes, rest.names = list(self.nodes), dict(self.names)
+        for index in steady:
+            rest.nodes[index] = (steady_name(index), ())
+            rest.names[steady_name(index)] = index
+        return rest, [Trace(self, index) for index in steady]
+
     def _add(self, function: Any, arguments: tuple[Argument, ...]) -> int:
         key = (function, arguments)
         found = self._seen.get(key)
@@ -171,6 +192,11 @@ def _fold(function: Any, inputs: tuple[Any, ...]) -> Any:
     if function is np.divide and number_a and float(a) == 0.0:
         return 0.0
     return None
+
+
+def steady_name(index: int) -> str:
+    """Input name of the quantity `index` of the tape that was split."""
+    return f"steady:{index}"
 
 
 class Program:

@@ -16,7 +16,9 @@ QUICK_STEPS = 4
 #: Rows from which a table is solved from a sample of its own heats: the sample and its fit
 #: cost about as much as 1500 heats by Newton. FOLLOWED_STEPS: most steps from there.
 SAMPLED_FROM = 6000
-FOLLOWED_STEPS = 9
+#: Rows from which a fit at hand is used at all.
+FITTED_FROM = 64
+FOLLOWED_STEPS = 7
 #: Halvings of one Newton step before it is taken all the same.
 MOST_HALVINGS = 6
 #: Heats worked on at once when a recorded formula is replayed: small enough for its buffers

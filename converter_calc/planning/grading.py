@@ -16,9 +16,9 @@ from converter_calc.planning.grades import (
     tell_tramp,
     worst_element,
 )
-from converter_calc.planning.limits import mark_infeasible, still_open
 from converter_calc.planning.outcome import Caution, Outcome, spread
 from converter_calc.planning.solving import with_values
+from converter_calc.planning.verdicts import mark_infeasible, still_open
 
 
 def aim_of(heats: HeatTable) -> ConverterAim | None:
@@ -128,7 +128,9 @@ def grade_notes(outcome: Outcome) -> list[Caution]:
     if aim is None:
         return []
     found = [
-        Caution("grade", "aim.grade", np.ones(1, dtype=bool), note.replace("{", "{{").replace("}", "}}"))
+        Caution(
+            "grade", "aim.grade", np.ones(1, dtype=bool), note.replace("{", "{{").replace("}", "}}")
+        )
         for note in aim.notes
     ]
     have = outcome.steel_pct().get("Mn")

@@ -19,10 +19,10 @@ from converter_calc.basis.errors import Fault, InputError
 from converter_calc.basis.units import ZERO_C_K
 from converter_calc.laws import magnesia, phosphorus
 from converter_calc.planning.grading import with_grade_aims
-from converter_calc.planning.limits import lime_in_vain
 from converter_calc.planning.outcome import Outcome, spread
 from converter_calc.planning.solving import plan_groups, solve_heats, with_masses, with_values
 from converter_calc.planning.sweeps import only_one, repeated, with_silicon
+from converter_calc.planning.verdicts import lime_in_vain
 
 if TYPE_CHECKING:
     import pandas as pd

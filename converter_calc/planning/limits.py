@@ -7,24 +7,29 @@ equations with the quantity at its limit and the aim let go.
 
 from __future__ import annotations
 
-from collections.abc import Callable
 from dataclasses import replace
 from typing import Any
 
 import numpy as np
 
 from converter_calc.balance.asks import Ask
-from converter_calc.balance.closures import basicity_margin, lime_limit, phosphorus_margin
 from converter_calc.balance.heats import HeatTable
 from converter_calc.basis.dual import Array
-from converter_calc.basis.units import ZERO_C_K
 from converter_calc.planning.outcome import Outcome, at, spread
 from converter_calc.planning.solving import solve_heats, with_masses, with_values
+from converter_calc.planning.verdicts import (
+    EndPoint,
+    end_point_of,
+    lime_in_vain,
+    mark_infeasible,
+    reachable,
+    still_open,
+)
+
+__all__ = ["judge", "lime_in_vain", "mark_infeasible", "still_open", "unsolved_ask"]
 
 #: A limit counts as broken beyond this share of it: rounding, not practice.
 SLACK = 1e-7
-#: An aim counts as what sets the lime within this relative distance of it.
-AT_AIM = 1e-4
 
 
 def judge(outcome: Outcome) -> None:
@@ -35,40 +40,6 @@ def judge(outcome: Outcome) -> None:
     _judge_unsolved(outcome)
     for check in (_short_of_heat, _no_trim, _scrap_limits, _stocks, _weights):
         check(outcome)
-
-
-def still_open(outcome: Outcome) -> Array:
-    """Heats that no limit has stopped yet, (n,) bool."""
-    return np.array([status == "solved" for status in outcome.status], dtype=bool)
-
-
-def mark_infeasible(
-    outcome: Outcome,
-    rows: Array,
-    binding: Callable[[int], str],
-    frees: Callable[[int], list[str]],
-    nearest: Outcome | None = None,
-) -> None:
-    """Mark heats as infeasible; `nearest` holds one solved heat for each row."""
-    for place, row in enumerate(rows.tolist()):
-        outcome.status[row] = "infeasible"
-        outcome.binding[row] = binding(row)
-        outcome.frees[row] = frees(row)
-        if nearest is not None and nearest.converged[place]:
-            outcome.nearest[row] = end_point_of(nearest, place)
-
-
-def end_point_of(outcome: Outcome, index: int) -> dict[str, float]:
-    """End point of one heat as few plain numbers."""
-    s, steel = outcome.state, outcome.steel_pct()
-    found = {
-        "end_temp_C": s.T_K - ZERO_C_K,
-        "end_C_pct": steel["C"],
-        "end_P_pct": steel.get("P", 0.0),
-        "steel_kg": s.steel_kg,
-        "slag_kg": s.slag_kg,
-    }
-    return {name: float(at(x, index)) for name, x in found.items()}
 
 
 def _judge_unsolved(outcome: Outcome) -> None:
@@ -86,24 +57,6 @@ def _judge_unsolved(outcome: Outcome) -> None:
     by_basicity = solve_heats(with_values(most.heats, aim_P_pct=np.nan), outcome.ask)
     for place, row in enumerate(rows.tolist()):
         _judge_lime(outcome, row, most, by_basicity, place)
-
-
-def lime_in_vain(outcome: Outcome) -> Array:
-    """Heats in which the phosphorus aim asks for lime that does not dissolve any more, (n,) bool.
-
-    Such lime holds no phosphorus back; it only cools and takes the place of scrap.
-    """
-    p, n = outcome.p, outcome.n
-    aim = outcome.heats.values["aim_P_pct"]
-    if not np.isfinite(aim).any() or "P" not in outcome.state.metal_species_kg:
-        return np.zeros(n, dtype=bool)
-    with np.errstate(invalid="ignore"):
-        by_P = np.abs(spread(phosphorus_margin(p, outcome.state), n)) < AT_AIM
-        beyond = spread(lime_limit(p, outcome.x, outcome.state), n) > 0.0
-        above = spread(basicity_margin(p, outcome.state), n) > AT_AIM
-    pinned = np.isfinite(outcome.heats.values["pin_basicity"])
-    pinned |= np.isfinite(outcome.heats.values["pin_slag_CaO_pct"])
-    return outcome.converged & by_P & beyond & above & ~pinned
 
 
 def _judge_lime(
@@ -125,7 +78,7 @@ def _judge_lime(
             np.array([row]),
             lambda _: (
                 f"phosphorus (aim.P_pct): at the most lime that dissolves the steel ends at "
-                f"{P:.4f} % P, the aim is {aim_P:.4f} % P"
+                f"{P:.4g} % P, the aim is {aim_P:.4g} % P"
             ),
             lambda _: [
                 "a lower tapping temperature",
@@ -133,7 +86,7 @@ def _judge_lime(
                 "two slags, or hot metal treated for phosphorus before",
                 "less phosphorus in hot metal and scrap",
             ],
-            _alone(best, place),
+            [end_point_of(best, place)],
         )
     elif aim_B > B and not outcome.converged[row]:
         mark_infeasible(
@@ -144,16 +97,11 @@ def _judge_lime(
                 f"the least asked for is {aim_B:.2f}"
             ),
             lambda _: ["a lower aim.basicity", "more fluid slag (more iron oxide)"],
-            _alone(most, place),
+            [end_point_of(most, place)],
         )
 
 
-def _alone(outcome: Outcome, place: int) -> Outcome:
-    """One heat of an outcome, solved again alone."""
-    return solve_heats(outcome.heats.take(np.array([place])), outcome.ask)
-
-
-def _let_temperature_go(outcome: Outcome, rows: Array, scrap_kg: Any) -> Outcome:
+def _let_temperature_go(outcome: Outcome, rows: Array, scrap_kg: Any) -> list[EndPoint]:
     """The same heats with the free scrap set and the end temperature free."""
     heats = outcome.heats.take(rows)
     heats = with_values(
@@ -162,7 +110,7 @@ def _let_temperature_go(outcome: Outcome, rows: Array, scrap_kg: Any) -> Outcome
         scrap_share_pct=np.nan,
         hot_metal_kg=spread(outcome.state.hot_metal_kg, outcome.n)[rows],
     )
-    return solve_heats(heats, replace(outcome.ask, heat="T_K", hot_metal=False))
+    return reachable(heats, replace(outcome.ask, heat="T_K", hot_metal=False))
 
 
 def _trim_for(outcome: Outcome, rows: Array, scrap_kg: Any) -> Array:
@@ -187,9 +135,9 @@ def _short_of_heat(outcome: Outcome) -> None:
     mark_infeasible(
         outcome,
         rows,
-        lambda row: "heat: the hot metal is too cold or too lean to reach the aim without fuel",
+        lambda _: "heat: the hot metal is too cold or too lean to reach the aim without fuel",
         lambda row: [
-            f"about {fuel[place[row]]:.0f} kg of {name} as fuel (choice.ask = \"trim\")",
+            f'about {fuel[place[row]]:.0f} kg of {name} as fuel (choice.ask = "trim")',
             "hotter hot metal or hot metal richer in silicon",
             "a lower tapping temperature",
         ],
@@ -209,14 +157,14 @@ def _no_trim(outcome: Outcome) -> None:
         if not rows.size:
             continue
         heats = with_masses(outcome.heats.take(rows), {name: stock})
-        nearest = solve_heats(heats, replace(outcome.ask, heat="T_K"))
+        nearest = reachable(heats, replace(outcome.ask, heat="T_K"))
         mark_infeasible(
             outcome,
             rows,
             lambda row, need=need, name=name, stock=stock: (
                 f"stock: the heat needs {need[row]:.0f} kg of {name}, {stock:.0f} kg are at hand"
             ),
-            lambda row, name=name: [
+            lambda _, name=name: [
                 f"more {name} (materials.{name}.stock_kg)",
                 "another share of scrap",
                 "another tapping temperature",
@@ -288,8 +236,10 @@ def _scrap_limits(outcome: Outcome) -> None:
             f"{cap[row]:.0f} kg are allowed"
         ),
         lambda row: [
-            f"about {trim[place[row]]:.0f} kg of {coolant} as coolant beside {cap[row]:.0f} kg "
-            'of scrap (choice.ask = "trim" with charge.scrap_kg)',
+            (
+                f"about {trim[place[row]]:.0f} kg of {coolant} as coolant beside {cap[row]:.0f} "
+                'kg of scrap (choice.ask = "trim" with charge.scrap_kg)'
+            ),
             "less hot metal",
             "a higher limit or stock of scrap",
         ],
@@ -312,10 +262,24 @@ def _largest_shares(outcome: Outcome) -> None:
                 f"materials.{name}.max_share_pct: {name} is {share[row]:.1f} % of the scrap, "
                 f"{most:.1f} % are allowed"
             ),
-            lambda row, name=name, most=most: [
+            lambda _, name=name, most=most: [
                 f"{name} at {most:.1f} % of the scrap or less (choice.scrap_mix)"
             ],
+            _with_share(outcome, rows, name, most) if rows.size else None,
         )
+
+
+def _with_share(outcome: Outcome, rows: Array, name: str, most_pct: float) -> list[EndPoint] | None:
+    """The same heats with one scrap at its largest share, the others of the mix in its place."""
+    heats = outcome.heats.take(rows)
+    mix = heats.choices.scrap_mix
+    rest = sum(share for key, share in mix.items() if key != name)
+    if name not in mix or rest <= 0.0:
+        return None
+    most = most_pct * 0.01
+    cut = {key: most if key == name else x * (1.0 - most) / rest for key, x in mix.items()}
+    cut = {key: share for key, share in cut.items() if share > 0.0}
+    return reachable(replace(heats, choices=replace(heats.choices, scrap_mix=cut)), outcome.ask)
 
 
 def _stocks(outcome: Outcome) -> None:
@@ -331,8 +295,21 @@ def _stocks(outcome: Outcome) -> None:
                 f"materials.{name}.stock_kg: the heat needs {need[row]:.0f} kg of {name}, "
                 f"{stock:.0f} kg are at hand"
             ),
-            lambda row, name=name: [f"more {name}", f"another material in place of {name}"],
+            lambda _, name=name: [f"more {name}", f"another material in place of {name}"],
+            _with_stock(outcome, rows, name, stock) if rows.size else None,
         )
+
+
+def _with_stock(outcome: Outcome, rows: Array, name: str, stock: float) -> list[EndPoint] | None:
+    """The same heats with no more lime or magnesia flux than there is; None for the rest."""
+    choices, ask = outcome.heats.choices, outcome.ask
+    if ask.lime and name == choices.lime:
+        ask = replace(ask, lime=False)
+    elif ask.flux and name == choices.magnesia_flux:
+        ask = replace(ask, flux=False)
+    else:
+        return None
+    return reachable(with_masses(outcome.heats.take(rows), {name: stock}), ask)
 
 
 def _weights(outcome: Outcome) -> None:
@@ -363,8 +340,10 @@ def _weights(outcome: Outcome) -> None:
                 f"{most[row]:.0f} {unit} are allowed"
             ),
             lambda row, have=have, most=most, label=label: [
-                f"a heat smaller by {100.0 * (1.0 - most[row] / have[row]):.1f} %, which reaches "
-                "the same aim",
+                (
+                    f"a heat smaller by {100.0 * (1.0 - most[row] / have[row]):.1f} %, which "
+                    "reaches the same aim"
+                ),
                 *(
                     ["less silicon in the hot metal", "a higher P aim or lower aim.basicity"]
                     if label == "slag"
@@ -375,13 +354,13 @@ def _weights(outcome: Outcome) -> None:
         )
 
 
-def _smaller(outcome: Outcome, rows: Array, factor: Array) -> Outcome:
+def _smaller(outcome: Outcome, rows: Array, factor: Array) -> list[EndPoint]:
     """The same heats with every mass that is given scaled down."""
     heats = outcome.heats.take(rows)
     names = ("hot_metal_kg", "aim_steel_kg", "scrap_kg", "retained_slag_kg", "stirring_gas_Nm3")
     scaled = with_values(heats, **{name: heats.values[name] * factor for name in names})
     masses = {name: kg * factor for name, kg in heats.masses_kg.items()}
-    return solve_heats(with_masses(scaled, masses), outcome.ask)
+    return reachable(with_masses(scaled, masses), outcome.ask)
 
 
 def unsolved_ask(ask: Ask) -> str:

@@ -90,8 +90,8 @@ def plan_groups(heats: HeatTable) -> list[tuple[Array, HeatTable, Ask]]:
     free_scrap = ~(share | scrap)
     if ask == "trim":
         free_scrap = np.zeros(heats.n, dtype=bool)
-    elif ask in ("scrap", "steel"):
-        free_scrap = ~share
+    elif ask in ("scrap", "steel"):  # scraps given by name come on top
+        free_scrap = ~(share | given(heats, "scrap_kg"))
     _faults(
         heats,
         [
@@ -101,9 +101,27 @@ def plan_groups(heats: HeatTable) -> list[tuple[Array, HeatTable, Ask]]:
                 "not given; give hot_metal.mass_kg, or aim.steel_kg to have it solved for",
             ),
             (
-                hot_metal & steel & (ask == "steel"),
+                hot_metal & steel,
                 "hot_metal.mass_kg",
-                'given although choice.ask = "steel" solves for it; leave one of the two out',
+                "given beside aim.steel_kg, from which it would follow; leave one of the two out",
+            ),
+            (
+                ~steel & (ask == "steel"),
+                "aim.steel_kg",
+                'not given; choice.ask = "steel" needs the steel to tap',
+            ),
+            *(
+                (
+                    given(heats, name) & (ask == "scrap"),
+                    f"charge.{name}",
+                    'given although choice.ask = "scrap" solves for it; leave one of the two out',
+                )
+                for name in ("scrap_share_pct", "scrap_kg")
+            ),
+            (
+                ~(share | scrap) & (ask == "trim"),
+                "charge.scrap_kg",
+                'not given; choice.ask = "trim" needs the scrap (0 for none)',
             ),
             (
                 ~given(heats, "aim_temp_C"),
@@ -118,11 +136,15 @@ def plan_groups(heats: HeatTable) -> list[tuple[Array, HeatTable, Ask]]:
             (
                 free_scrap & pinned_end,
                 "pin.end_temp_C",
-                "given while scrap is free; with the end temperature pinned the heat loss "
-                "closes the balance, so scrap must be given",
+                (
+                    "given while scrap is free; with the end temperature pinned the heat loss "
+                    "closes the balance, so scrap must be given"
+                ),
             ),
             (
-                free_scrap & ~share & (not heats.choices.scrap_mix and not heats.choices.scrap_order),
+                free_scrap
+                & ~share
+                & (not heats.choices.scrap_mix and not heats.choices.scrap_order),
                 "choice.scrap_mix",
                 "not given; name the scrap to charge, as scrap_mix or scrap_order",
             ),
@@ -141,9 +163,7 @@ def plan_groups(heats: HeatTable) -> list[tuple[Array, HeatTable, Ask]]:
     for kind in np.unique(key):
         rows = np.flatnonzero(key == kind)
         heat = "heat_loss_J" if kind & 16 else "scrap_kg" if kind & 1 else "trim_kg"
-        ask_of = Ask(
-            heat=heat, hot_metal=bool(kind & 2), lime=bool(kind & 4), flux=bool(kind & 8)
-        )
+        ask_of = Ask(heat=heat, hot_metal=bool(kind & 2), lime=bool(kind & 4), flux=bool(kind & 8))
         groups.append((rows, heats.take(rows) if rows.size < heats.n else heats, ask_of))
     return groups
 

@@ -17,10 +17,10 @@ from converter_calc.balance.schema import parameters
 from converter_calc.basis.dual import Array, Num
 from converter_calc.basis.elements import molar_mass
 from converter_calc.basis.errors import Fault, InputError
-from converter_calc.planning.limits import lime_in_vain
 from converter_calc.planning.outcome import Outcome, at, spread
 from converter_calc.planning.plan import plan_heats
 from converter_calc.planning.solving import with_masses, with_values
+from converter_calc.planning.verdicts import lime_in_vain
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -95,7 +95,7 @@ def map_columns(heats: HeatTable) -> dict[str, Column]:
         if np.isfinite(heats.values[name]).all():
             priced.append(text)
     upstream = [name for name in used if heats.materials[name].CO2_kg_per_t is not None]
-    making = f"making of {_listed(upstream)}; nothing else brings any along"
+    making = f"making of {_listed(upstream)} (of nothing else)"
     burnt = "all carbon that leaves in the gas, burnt to CO2"
     return {
         "scrap_share_pct": Column("scrap share", "% of hot metal and scrap"),
@@ -114,7 +114,7 @@ def map_columns(heats: HeatTable) -> dict[str, Column]:
         "yield_pct": Column("metallic yield", "%"),
         "end_P_pct": Column("end phosphorus", "mass %"),
         "cost_per_t": Column(
-            "cost of materials", "currency/t steel", f"counts {_listed(priced)}; nothing else"
+            "cost of materials", "currency/t steel", f"of {_listed(priced)} (of nothing else)"
         ),
         "CO2_gas_kg_per_t": Column("CO2 of the off-gas", "kg/t steel", burnt),
         "CO2_materials_kg_per_t": Column("CO2 of materials", "kg/t steel", making),

@@ -68,18 +68,21 @@ def scrap_map_figure(
         )
     )  # fmt: skip
     if (feasible < 0.5).any():
-        shade = np.where(feasible < 0.5, 1.0, np.nan)
-        grey = faded(PALETTE["grey"], 0.65)
+        grey = faded(PALETTE["grey"], 0.7)
         figure.add_trace(
-            go.Heatmap(x=x, y=y, z=shade, showscale=False, hoverinfo="skip",
-                       colorscale=[[0.0, grey], [1.0, grey]])
+            go.Contour(x=x, y=y, z=1.0 - feasible, showscale=False, hoverinfo="skip",
+                       showlegend=False, fillcolor=grey, line={"width": 2, "color": text},
+                       contours={"type": "constraint", "operation": ">", "value": 0.5})
         )  # fmt: skip
         figure.add_trace(_mark([None], [None], "cannot be made", symbol="square", color=grey))
     if two_sided:
+        # each side by its own size: a kilogram of coolant and one of fuel differ in heat
+        both = [_grid(part, name)[2] for name in ("coolant_kg", "fuel_kg")]
+        even = both[0] / np.nanmax(both[0]) - both[1] / np.nanmax(both[1])
         figure.add_trace(
-            go.Contour(x=x, y=y, z=z, showscale=False, hoverinfo="skip", showlegend=False,
-                       contours={"start": 0.0, "end": 0.0, "coloring": "none"},
-                       line={"width": 3, "color": "#1b1f24"})
+            go.Contour(x=x, y=y, z=even, showscale=False, hoverinfo="skip", name="neither needed",
+                       showlegend=True, line={"width": 3, "color": "#1b1f24"},
+                       contours={"start": 0.0, "end": 0.0, "size": 1.0, "coloring": "none"})
         )  # fmt: skip
     if today is not None:
         figure.add_trace(
@@ -251,11 +254,11 @@ def effect_text(table: pd.DataFrame, kind: str) -> str:
     known = table.dropna(subset=["end_P_pct"]).sort_values(column)
     if known.empty:
         return f"End phosphorus against {title}: no point has a solution."
-    a, b = known.iloc[0], known.iloc[-1]
-    return (
-        f"End phosphorus goes from {a['end_P_pct']:.4f} to {b['end_P_pct']:.4f} % as {title} goes "
-        f"from {a[column]:,.4g} to {b[column]:,.4g}."
-    )
+    parts = [
+        f"{row['end_P_pct']:.4f} % at {row[column]:,.4g}"
+        for row in (known.iloc[0], known.iloc[-1], known.iloc[known["end_P_pct"].argmin()])
+    ]
+    return f"End phosphorus against {title}: {parts[0]}, {parts[1]}; lowest {parts[2]}."
 
 
 def _at_silicon(

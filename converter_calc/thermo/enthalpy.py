@@ -305,6 +305,41 @@ class EnthalpySet:
         return _Interval(table, np.array(cp))
 
 
+    def at(self, T_K: Num) -> tuple[Any, Any]:
+        """Enthalpies, and heat capacities if T is a Dual (else None), one row a member.
+
+        For `heat_of`; [J/kg], [J/(kg K)].
+        """
+        if isinstance(T_K, Dual):
+            return self.evaluate(T_K.v)
+        return self.evaluate_dual(T_K), None
+
+
+def heat_of(kg: Sequence[Num], T_K: Num, h: Any, cp: Any) -> Num:
+    """Enthalpy [J] of the masses `kg` [kg] whose enthalpies at T are `h` [J/kg].
+
+    h, cp : rows of `EnthalpySet.at`. The slopes by T are gathered over all masses before the
+    chain rule, which costs a fraction of a product of Duals each.
+    """
+    total: Num = 0.0
+    d: dict[str, Any] = {}
+    by_T: Any = 0.0
+    for mass, heat, capacity in zip(kg, h, cp if cp is not None else h, strict=True):
+        plain = mass.v if isinstance(mass, Dual) else mass
+        total = total + plain * heat
+        if isinstance(mass, Dual):
+            for key, inner in mass.d.items():
+                part = inner * heat
+                d[key] = d[key] + part if key in d else part
+        if cp is not None:
+            by_T = by_T + plain * capacity
+    if isinstance(T_K, Dual):
+        for key, inner in T_K.d.items():
+            part = inner * by_T
+            d[key] = d[key] + part if key in d else part
+    return Dual(total, d) if d else total
+
+
 @cache
 def _single(species: str, phase: Phase) -> tuple[EnthalpySet, float]:
     return EnthalpySet([(species, phase)]), molar_mass(species_formula(species)) * 1e-3

@@ -67,6 +67,8 @@ class MetalEnthalpy:
         self._with_data = tuple(
             name for name in self.elements if name in _heats() or name in known_species()
         )
+        #: What an EnthalpySet has to hold for these elements: members, and offsets [J/kg].
+        self.members, self.offsets_J_kg = tuple(members), tuple(offsets)
         self._set = EnthalpySet(members, offsets, STEELMAKING_K)
 
     def evaluate_dual(self, T_K: Num) -> dict[str, Num]:

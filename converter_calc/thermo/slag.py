@@ -95,6 +95,8 @@ class SlagEnthalpy:
         self._row = {name: row for row, name in enumerate(self.oxides)}
         fusion = slag_constant("fusion") * 1e3
         hot: list[tuple[str, Phase]] = [(name, "top solid") for name in names]
+        #: What an EnthalpySet has to hold for these oxides: members, and offsets [J/kg].
+        self.members, self.offsets_J_kg = tuple(hot), (fusion,) * len(hot)
         self._molten = EnthalpySet(hot, [fusion] * len(hot), STEELMAKING_K)
 
     def enthalpy_J(self, kg: Mapping[str, Num], T_K: Num) -> Num:

@@ -19,12 +19,17 @@ def draw_heats(n: int, seed: int = 1) -> Any:
     def normal(mean: float, sd: float) -> Any:
         return np.clip(rng.normal(mean, sd, n), mean - 3 * sd, mean + 3 * sd)
 
+    hot_metal, carbon, silicon = normal(180000.0, 4000.0), normal(4.45, 0.08), normal(0.45, 0.09)
+    ore = normal(1200.0, 300.0)
+    # oxygen as a shop would blow it: by weight and analysis, with the spread of a static blow
+    oxygen = 10050.0 + 1700.0 * (carbon - 4.45) + 1500.0 * (silicon - 0.45)
+    oxygen += 0.055 * (hot_metal - 180000.0) - 0.2 * (ore - 1200.0) + normal(0.0, 60.0)
     return pd.DataFrame(
         {
-            "hot_metal_kg": normal(180000.0, 4000.0),
+            "hot_metal_kg": hot_metal,
             "hot_metal_temp_C": normal(1345.0, 18.0),
-            "hm_C_pct": normal(4.45, 0.08),
-            "hm_Si_pct": normal(0.45, 0.09),
+            "hm_C_pct": carbon,
+            "hm_Si_pct": silicon,
             "hm_Mn_pct": normal(0.35, 0.05),
             "hm_P_pct": normal(0.085, 0.008),
             "hm_S_pct": normal(0.012, 0.003),
@@ -36,8 +41,8 @@ def draw_heats(n: int, seed: int = 1) -> Any:
             "light_scrap_kg": normal(13000.0, 1500.0),
             "burnt_lime_kg": normal(8500.0, 700.0),
             "dolomitic_lime_kg": normal(3500.0, 300.0),
-            "lump_ore_kg": normal(1200.0, 300.0),
-            "oxygen_Nm3": normal(10100.0, 120.0),
+            "lump_ore_kg": ore,
+            "oxygen_Nm3": oxygen,
         }
     )
 
