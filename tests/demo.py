@@ -28,6 +28,8 @@ def whole(name: str) -> dict[str, Any]:
     shop = tomllib.loads((DEMO / "shop.toml").read_text(encoding="utf-8"))
     heat = tomllib.loads((DEMO / f"{name}.toml").read_text(encoding="utf-8"))
     del heat["shop"], shop["name"]
+    if "scrap_order" in heat.get("choice", {}):  # takes the place of the shop's mix
+        del shop["choice"]["scrap_mix"]
     return merged(shop, heat)
 
 

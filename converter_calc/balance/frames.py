@@ -114,7 +114,7 @@ def row_names(frame: pd.DataFrame) -> tuple[list[str], Callable[[int], str]]:
     if "heat_id" in frame.columns:
         ids = [str(name) for name in _first(frame, "heat_id").tolist()]
         return ids, lambda i: f" (row {labels[i]}, heat {ids[i]})"
-    return [str(label) for label in labels], lambda i: f" (row {labels[i]})"
+    return list(map(str, labels.tolist())), lambda i: f" (row {labels[i]})"
 
 
 def one_grade(frame: pd.DataFrame, givens: Givens) -> tuple[str | None, list[str]]:

@@ -112,11 +112,13 @@ def dense(J: Matrix, n: int) -> Array:
     return full
 
 
-def _norm(residuals: Sequence[Any]) -> Array:
-    size = np.abs(residuals[0])
-    for residual in residuals[1:]:
-        size = np.maximum(size, np.abs(residual))
-    return np.asarray(np.where(np.isfinite(size), size, np.inf))
+def _norm(residuals: Sequence[Any], shape: tuple[int, ...]) -> Array:
+    """Largest residual of each heat, infinite where one is not a number."""
+    size = np.zeros(shape)
+    for residual in residuals:
+        np.maximum(size, np.abs(residual), out=size)
+    size[~np.isfinite(size)] = np.inf
+    return size
 
 
 def newton_step(residuals: Sequence[Any], J: Matrix, n: int) -> tuple[list[Any], Any]:
@@ -196,7 +198,7 @@ def follow(
     with np.errstate(all="ignore"):
         for _ in range(steps):
             parts = equations.residuals(indices, x)
-            size = _norm([np.broadcast_to(part, indices.shape) for part in parts])
+            size = _norm(parts, indices.shape)
             better = size < least
             if better.all():
                 best, least = x, size
@@ -256,7 +258,7 @@ def solve(
             if not active.size:
                 break
             values, J = equations.jacobian(here, x)
-            norm = _norm([np.broadcast_to(r, active.shape) for r in values])
+            norm = _norm(values, active.shape)
             steps_of[active] += 1
             step, factors = newton_step(values, J, active.size)
             x, norm = _advance(equations, here, x, step, norm, reach, factors)
@@ -286,7 +288,7 @@ def _advance(
     share = _damping(x, step, reach)
     new = {name: x[name] + share * move for name, move in zip(names, step, strict=True)}
     parts = equations.residuals(here, new)
-    size = _norm([np.broadcast_to(part, here.shape) for part in parts])
+    size = _norm(parts, here.shape)
     for _ in range(MOST_HALVINGS):
         worse = np.flatnonzero(size > norm)
         if not worse.size:
@@ -297,7 +299,7 @@ def _advance(
             for name, move in zip(names, step, strict=True)
         }
         again = equations.residuals(here[worse], some)
-        size[worse] = _norm([np.broadcast_to(part, worse.shape) for part in again])
+        size[worse] = _norm(again, worse.shape)
         for name in names:
             new[name][worse] = some[name]
         parts = [np.array(np.broadcast_to(part, here.shape)) for part in parts]
@@ -309,7 +311,7 @@ def _advance(
         move = substitute(*factors, [-part for part in parts])
         trial = {name: new[name] + d for name, d in zip(names, move, strict=True)}
         further = equations.residuals(here, trial)
-        reached = _norm([np.broadcast_to(part, here.shape) for part in further])
+        reached = _norm(further, here.shape)
         better = reached < 0.3 * size
         if not better.any():
             break

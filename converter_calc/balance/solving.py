@@ -9,7 +9,7 @@ goes through Newton; so the sample decides how long it takes, never what comes o
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import Any
 
 import numpy as np
@@ -17,7 +17,7 @@ import numpy as np
 from converter_calc.balance.asks import REACH, Ask, first_guess
 from converter_calc.balance.newton import Solved, Unknowns, dense, follow, solve
 from converter_calc.balance.problem import Problem
-from converter_calc.balance.system import System
+from converter_calc.balance.system import Recorded, System
 from converter_calc.basis.dual import Array
 from converter_calc.basis.tolerances import (
     BLOCK,
@@ -48,19 +48,20 @@ MOST_CROSSED = 24
 OUTLIER = 4.0
 
 
-def solve_ask(p: Problem, ask: Ask, fits: Fits | None = None) -> Solved:
+def solve_ask(p: Problem, ask: Ask, memory: Memory | None = None) -> Solved:
     """Solve all heats of `p` for what `ask` leaves open.
 
-    fits : samples of earlier parts of the same table, used again and added to.
+    memory : of earlier parts of the same table, used again and added to.
 
     Returns unknowns, residual norm, Jacobians used and convergence of each heat; nothing is
     raised for a heat that does not converge, and it does not touch its neighbours.
     """
     n = p.n
     guess = first_guess(p, ask)
-    system = System(p, ask)
+    memory = Memory() if memory is None else memory
+    system = System(p, ask, memory.recorded)
     solved = Solved(guess, np.full(n, np.inf), np.zeros(n, dtype=int), np.zeros(n, dtype=bool))
-    fit = _fit_for(system, guess, {} if fits is None else fits)
+    fit = _fit_for(system, guess, memory.fits)
     if fit is not None:
         for first in range(0, n, CHUNK):
             rows = np.arange(first, min(first + CHUNK, n))
@@ -159,6 +160,17 @@ class Fit:
 
 #: Fits by ask and names of the inputs that vary.
 Fits = dict[Any, Fit]
+
+
+@dataclass
+class Memory:
+    """What parts of one table hand on to each other: fits of samples, recorded programs.
+
+    Only for parts that share their shop: the programs hold its materials.
+    """
+
+    fits: Fits = field(default_factory=dict)
+    recorded: Recorded = field(default_factory=dict)
 
 
 def _standard(inputs: Array, mean: Array, deviation: Array) -> Array:

@@ -39,6 +39,8 @@ from converter_calc.thermo.metal import MetalEnthalpy
 from converter_calc.thermo.slag_compounds import compound_heat_J
 
 GASES = ("CO", "CO2", "H2", "H2O", "N2", "Ar", "SO2", "O2")
+#: Between these temperatures [K] off-gas leaves the bath; dust is followed in one piece there.
+GAS_LEAVES_K = (1500.0, 2300.0)
 #: Rounding of the corner where lime stops dissolving, as a share of the slag mass.
 LIME_CORNER = 0.003
 
@@ -519,7 +521,7 @@ def _gas_and_dust_set(dust: tuple[str, ...]) -> EnthalpySet:
     """Gases and dust at the temperature of the gas; dust without jumps at transitions."""
     solids = [("P4O10" if name == "P2O5" else name, "top solid") for name in dust]
     members = [*((name, "stable") for name in GASES), *solids]
-    return EnthalpySet(members, None, STEELMAKING_K)
+    return EnthalpySet(members, None, GAS_LEAVES_K)
 
 
 def _heat(p: Problem, x: Mapping[str, Num], s: State) -> None:

@@ -19,7 +19,8 @@ from converter_calc.basis.dual import Array, Num
 from converter_calc.basis.units import MJ, ZERO_C_K
 from converter_calc.thermo.enthalpy import enthalpy_J_kg
 
-GAS_TEMPERATURE_STEPS = 8
+#: Newton on a nearly straight line: the fourth step is at rounding.
+GAS_TEMPERATURE_STEPS = 5
 
 
 @dataclass

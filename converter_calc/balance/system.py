@@ -54,14 +54,28 @@ def _record(p: Problem, ask: Ask, *, slopes: bool) -> tuple[Tape, list[Any]]:
     ]
 
 
+#: Programs by ask and by what does not differ between the heats.
+Recorded = dict[Any, Any]
+
+
+def _fixed_parts(p: Problem) -> Any:
+    """What a recording takes as it stands: names of arrays, and all plain numbers."""
+    return tuple(
+        (part, name, "array" if isinstance(x, np.ndarray) and x.ndim else float(x))
+        for part in PARTS
+        for name, x in getattr(p, part).items()
+    )
+
+
 class System:
     """Residuals and Jacobians of n heats for one ask.
 
     Raises nothing for values without sense: they come out as NaN or infinite.
     """
 
-    def __init__(self, p: Problem, ask: Ask) -> None:
+    def __init__(self, p: Problem, ask: Ask, recorded: Recorded | None = None) -> None:
         self.p, self.ask, self.n = p, ask, p.n
+        self._recorded: Recorded = {} if recorded is None else recorded
         self._programs: dict[bool, Program] = {}
         self._arrays: dict[str, Array] = {
             f"{part}:{name}": x
@@ -78,21 +92,25 @@ class System:
 
     def _program(self, *, slopes: bool) -> Program:
         if slopes not in self._programs:
-            tape, outputs = _record(self.p, self.ask, slopes=slopes)
-            block = max(1, min(BLOCK_WITH_SLOPES if slopes else BLOCK, self.n))
-            if not slopes and self.n > 1:
-                tape = self._set_apart(tape, outputs, block)
-            self._programs[slopes] = Program(tape, outputs, block)
+            key = (self.ask, slopes, _fixed_parts(self.p))
+            if key not in self._recorded:
+                self._recorded[key] = self._record(slopes=slopes)
+            program, steady, names = self._recorded[key]
+            if steady is not None:
+                self._arrays |= dict(zip(names, steady.run(self._arrays, self.n), strict=True))
+                self._rows = None
+            self._programs[slopes] = program
         return self._programs[slopes]
 
-    def _set_apart(self, tape: Tape, outputs: list[Any], block: int) -> Tape:
-        """Work out once what no unknown moves; the tape that is left to replay."""
+    def _record(self, *, slopes: bool) -> tuple[Program, Program | None, list[str]]:
+        """Program to replay, program of what no unknown moves, and the names of that."""
+        tape, outputs = _record(self.p, self.ask, slopes=slopes)
+        block = max(1, min(BLOCK_WITH_SLOPES if slopes else BLOCK, self.n))
+        if slopes or self.n == 1:
+            return Program(tape, outputs, block), None, []
         rest, steady = tape.split(["x:" + name for name in self.ask.unknowns], outputs)
-        found = Program(tape, steady, block).run(self._arrays, self.n)
-        for quantity, x in zip(steady, found, strict=True):
-            self._arrays[steady_name(quantity.index)] = x
-        self._rows = None
-        return rest
+        names = [steady_name(quantity.index) for quantity in steady]
+        return Program(rest, outputs, block), Program(tape, steady, block), names
 
     def _run(self, rows: Any, x: Mapping[str, Array], *, slopes: bool) -> list[Any]:
         program = self._program(slopes=slopes)

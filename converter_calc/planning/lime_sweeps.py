@@ -67,8 +67,8 @@ def lime_curve(heats: HeatTable, lime_kg: Any, laws: Sequence[str] | None = None
 
     Parameters
     ----------
-    heats : one heat. lime_kg : mass of choice.lime [kg], (n,), 0 or more. laws : names; the
-        chosen law comes first. None: all published laws.
+    heats : one heat. lime_kg : mass of choice.lime [kg], (n,), 0 or more. laws : names, of
+        which the chosen law comes first in any case. None: all published laws.
 
     Returns
     -------
@@ -195,7 +195,8 @@ def _with_law(heats: HeatTable, law: str) -> HeatTable:
 
 def _in_order(heats: HeatTable, laws: Sequence[str] | None) -> list[str]:
     """The chosen law, then the others; each is looked up, so an unknown one raises here."""
-    names = list(dict.fromkeys([heats.choices.laws["phosphorus"], *(laws or phosphorus.laws())]))
+    others = phosphorus.laws() if laws is None else laws
+    names = list(dict.fromkeys([heats.choices.laws["phosphorus"], *others]))
     for name in names:
         phosphorus.describe(name)
     return names

@@ -36,7 +36,7 @@ def judge(outcome: Outcome) -> None:
     """Fill status, binding, frees and nearest of every heat of a plan."""
     n = outcome.n
     outcome.status = ["solved"] * n
-    outcome.binding, outcome.frees, outcome.nearest = [""] * n, [[] for _ in range(n)], [{}] * n
+    outcome.binding, outcome.frees, outcome.nearest = [""] * n, [[]] * n, [{}] * n
     _judge_unsolved(outcome)
     for check in (_short_of_heat, _no_trim, _scrap_limits, _stocks, _weights):
         check(outcome)

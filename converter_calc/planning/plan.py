@@ -2,6 +2,9 @@
 
 from __future__ import annotations
 
+import itertools
+import os
+import threading
 from collections.abc import Callable, Iterator, Mapping
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -15,19 +18,25 @@ from converter_calc.balance.heats import (
     heats_from_frame,
     read_heat_file,
 )
+from converter_calc.balance.solving import Memory
 from converter_calc.basis.dual import Array
 from converter_calc.basis.errors import ConvergenceError, InfeasibleError
 from converter_calc.planning.cautions import cautions_of
 from converter_calc.planning.grading import grade_notes, judge_grade, with_grade_aims
 from converter_calc.planning.limits import judge
 from converter_calc.planning.outcome import Outcome
-from converter_calc.planning.solving import plan_groups, predict_groups, solve_heats
+from converter_calc.planning.solving import plan_groups, predict_groups, solve_in_parts
 
 if TYPE_CHECKING:
     import pandas as pd
 
-#: Rows of a table that are held in full at once; bounds the memory of a long table.
-ROWS_AT_ONCE = 32768
+#: Rows of a table that are solved at once, and that are read off at once: they bound the
+#: memory of a long table, and the second keeps its arrays in cache.
+ROWS_AT_ONCE = 65536
+ROWS_READ_OFF = 4096
+#: Rows from which a table is shared out among processes: starting them costs about as much
+#: as solving 3000 heats.
+SHARED_FROM = 30000
 
 Groups = list[tuple[Array, HeatTable, Ask]]
 
@@ -88,13 +97,16 @@ def solve_groups(
     heats: HeatTable,
     grouping: Callable[[HeatTable], Groups],
     finish: Callable[[Outcome], None],
+    rows_read_off: int | None = None,
+    memory: Memory | None = None,
 ) -> Iterator[tuple[Array, Outcome]]:
     """(row numbers, outcome) of each group of heats that pose the same question."""
     for rows, group, ask in grouping(heats):
-        outcome = solve_heats(group, ask)
-        finish(outcome)
-        outcome.cautions = [*cautions_of(outcome), *grade_notes(outcome)]
-        yield rows, outcome
+        size = rows_read_off or max(group.n, 1)
+        for place, outcome in enumerate(solve_in_parts(group, ask, size, memory)):
+            finish(outcome)
+            outcome.cautions = [*cautions_of(outcome), *grade_notes(outcome)]
+            yield rows[place * size : (place + 1) * size], outcome
 
 
 def plan_heats(heats: HeatTable) -> list[tuple[Array, Outcome]]:
@@ -117,12 +129,13 @@ def _finish_plan(outcome: Outcome) -> None:
 
 
 def _finish_predict(outcome: Outcome) -> None:
-    outcome.status = ["solved" if good else "not converged" for good in outcome.converged]
-    outcome.binding = [
-        "" if good else "no end point was found for this charge" for good in outcome.converged
-    ]
-    outcome.frees = [[] if good else ["check oxygen and charge"] for good in outcome.converged]
-    outcome.nearest = [{}] * outcome.n
+    n = outcome.n
+    outcome.status, outcome.binding = ["solved"] * n, [""] * n
+    outcome.frees, outcome.nearest = [[]] * n, [{}] * n
+    for row in np.flatnonzero(~outcome.converged).tolist():
+        outcome.status[row] = "not converged"
+        outcome.binding[row] = "no end point was found for this charge"
+        outcome.frees[row] = ["check oxygen and charge against ordinary practice"]
 
 
 def raise_unless_solved(outcome: Outcome, index: int = 0) -> None:
@@ -151,35 +164,104 @@ def _run_frame(
 ) -> pd.DataFrame:
     import pandas as pd
 
-    pieces = []
-    for first in range(0, max(len(frame), 1), ROWS_AT_ONCE):
-        part = frame.iloc[first : first + ROWS_AT_ONCE]
-        heats = heats_from_frame(part, shop=shop)
-        if heats.n == 0:
-            continue
-        solved = list(solve_groups(heats, grouping, finish))
-        pieces.append(_table(heats.n, solved))
+    workers = _workers(len(frame))
+    if workers > 1:
+        pieces = _share_out(frame, shop, grouping, finish, workers)
+    else:
+        pieces = _solve_frame(frame, shop, grouping, finish)
     if not pieces:
         return pd.DataFrame({"heat_id": [], "status": []})
-    table = pd.concat(pieces, ignore_index=True) if len(pieces) > 1 else pieces[0]
+    table = pd.DataFrame(_joined(pieces))
     table.index = frame.index
     return table
 
 
-def _table(n: int, solved: list[tuple[Array, Outcome]]) -> pd.DataFrame:
-    """One table of n rows from the groups of a table of heats."""
-    import pandas as pd
+def _workers(n: int) -> int:
+    """Processes to share n heats out to: one where it would not pay or is not safe.
 
-    if len(solved) == 1:
-        return pd.DataFrame(result_columns(solved[0][1]))
-    merged: dict[str, Any] = {}
-    for rows, outcome in solved:
-        for name, values in result_columns(outcome).items():
-            if name not in merged:
-                text = values.dtype == object
-                merged[name] = np.full(n, "" if text else np.nan, dtype=values.dtype)
-            merged[name][rows] = values
-    return pd.DataFrame(merged)
+    A process is forked, which is safe only while no other thread runs.
+    """
+    if n < SHARED_FROM or threading.active_count() > 1 or not hasattr(os, "fork"):
+        return 1
+    return min(os.cpu_count() or 1, n // (SHARED_FROM // 2))
+
+
+def _share_out(
+    frame: pd.DataFrame,
+    shop: Any,
+    grouping: Callable[[HeatTable], Groups],
+    finish: Callable[[Outcome], None],
+    workers: int,
+) -> list[Columns]:
+    """Equal parts of the table in processes of their own, in row order."""
+    import multiprocessing
+    from concurrent.futures import ProcessPoolExecutor
+
+    edges = np.linspace(0, len(frame), workers + 1).astype(int)
+    parts = [frame.iloc[a:b] for a, b in itertools.pairwise(edges)]
+    context = multiprocessing.get_context("fork")
+    with ProcessPoolExecutor(workers, mp_context=context) as pool:
+        runs = [pool.submit(_solve_frame, part, shop, grouping, finish) for part in parts]
+        return [piece for run in runs for piece in run.result()]
+
+
+Columns = dict[str, Any]
+
+
+def _solve_frame(
+    frame: pd.DataFrame,
+    shop: Any,
+    grouping: Callable[[HeatTable], Groups],
+    finish: Callable[[Outcome], None],
+) -> list[Columns]:
+    """Result columns of a table, in pieces of ROWS_AT_ONCE.
+
+    On one thread: the products are small, and waking another costs more than it saves.
+    """
+    from threadpoolctl import threadpool_limits
+
+    with threadpool_limits(limits=1, user_api="blas"):
+        return _solve_pieces(frame, shop, grouping, finish)
+
+
+def _solve_pieces(
+    frame: pd.DataFrame,
+    shop: Any,
+    grouping: Callable[[HeatTable], Groups],
+    finish: Callable[[Outcome], None],
+) -> list[Columns]:
+    pieces: list[Columns] = []
+    memory = Memory()
+    for first in range(0, len(frame), ROWS_AT_ONCE):
+        heats = heats_from_frame(frame.iloc[first : first + ROWS_AT_ONCE], shop=shop)
+        merged: Columns = {}
+        for rows, outcome in solve_groups(heats, grouping, finish, ROWS_READ_OFF, memory):
+            for name, values in result_columns(outcome).items():
+                if name not in merged:
+                    merged[name] = _blank(heats.n, text=values.dtype == object)
+                merged[name][rows] = values
+        pieces.append(merged)
+    return pieces
+
+
+def _blank(n: int, *, text: bool) -> Any:
+    return np.full(n, "" if text else np.nan, dtype=object if text else float)
+
+
+def _joined(pieces: list[Columns]) -> Columns:
+    """Pieces one under the other; a column that a piece lacks is blank there."""
+    sizes = [len(piece["heat_id"]) for piece in pieces]
+    names = dict.fromkeys(name for piece in pieces for name in piece)
+    joined: Columns = {}
+    for name in names:
+        text = any(piece[name].dtype == object for piece in pieces if name in piece)
+        joined[name] = np.concatenate(
+            [
+                piece[name] if name in piece else _blank(size, text=text)
+                for piece, size in zip(pieces, sizes, strict=True)
+            ]
+        )
+    return joined
 
 
 def result_columns(outcome: Outcome) -> dict[str, Any]:

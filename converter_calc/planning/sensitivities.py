@@ -13,7 +13,7 @@ import numpy as np
 
 from converter_calc.balance.asks import Ask, evaluate_ask
 from converter_calc.balance.heats import HeatTable
-from converter_calc.balance.newton import dense, jacobian
+from converter_calc.balance.newton import dense
 from converter_calc.balance.problem import build_problem
 from converter_calc.balance.state import State
 from converter_calc.basis import dual as ad
@@ -53,7 +53,7 @@ class Sensitivity:
     change: dict[str, float]
 
 
-def _steps(heats: HeatTable, aims: bool) -> dict[str, tuple[float, str]]:
+def _steps(heats: HeatTable, *, aims: bool) -> dict[str, tuple[float, str]]:
     """Inputs that this heat gives, with step and label."""
     steps = {}
     for name, entry in INPUTS.items():
@@ -97,7 +97,7 @@ def derivatives(
     state = evaluate_ask(p, ask, seeds)
     residuals = [state.residuals[name] for name in ask.residuals]
     unknown = ["x:" + name for name in ask.unknowns]
-    J = dense(jacobian(residuals, unknown), heats.n)
+    J = dense([[ad.slope(r, name) for name in unknown] for r in residuals], heats.n)
     G = np.zeros((heats.n, len(residuals), len(names)))
     for r, residual in enumerate(residuals):
         for c, name in enumerate(names):
@@ -137,7 +137,7 @@ def sensitivities(outcome: Outcome) -> dict[str, list[Sensitivity]]:
 
 
 def _one(heats: HeatTable, ask: Ask, x: dict[str, Array], *, aims: bool) -> list[Sensitivity]:
-    steps = _steps(heats, aims)
+    steps = _steps(heats, aims=aims)
     unknown = set(ask.unknowns)
     names = [name for name in steps if name not in unknown]
     table = derivatives(heats, ask, x, names)

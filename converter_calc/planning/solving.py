@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable
+from collections.abc import Iterable, Iterator
 from typing import Any
 
 import numpy as np
@@ -10,7 +10,7 @@ import numpy as np
 from converter_calc.balance.asks import Ask, evaluate_ask
 from converter_calc.balance.heats import HeatTable
 from converter_calc.balance.problem import build_problem
-from converter_calc.balance.solving import solve_ask
+from converter_calc.balance.solving import Memory, solve_ask
 from converter_calc.basis.dual import Array
 from converter_calc.basis.errors import Fault, InputError
 from converter_calc.planning.outcome import Outcome
@@ -200,13 +200,33 @@ def predict_groups(heats: HeatTable) -> list[tuple[Array, HeatTable, Ask]]:
 
 def solve_heats(heats: HeatTable, ask: Ask) -> Outcome:
     """Solve heats that pose the same question. Limits are not looked at here."""
+    (outcome,) = solve_in_parts(heats, ask, max(heats.n, 1))
+    return outcome
+
+
+def solve_in_parts(
+    heats: HeatTable, ask: Ask, rows: int, memory: Memory | None = None
+) -> Iterator[Outcome]:
+    """The same, an outcome for each `rows` heats: what is read off a long table stays small."""
     p = build_problem(heats)
-    solved = solve_ask(p, ask)
-    with np.errstate(all="ignore"):
-        state = evaluate_ask(p, ask, dict(solved.unknowns))
-    return Outcome(
-        heats, ask, p, solved.unknowns, state, solved.converged, solved.residual, solved.steps
-    )
+    solved = solve_ask(p, ask, memory)
+    for first in range(0, max(heats.n, 1), rows):
+        part = slice(first, min(first + rows, heats.n))
+        x = {name: values[part] for name, values in solved.unknowns.items()}
+        whole = part == slice(0, heats.n)
+        some = p if whole else p.take(part)
+        with np.errstate(all="ignore"):
+            state = evaluate_ask(some, ask, dict(x))
+        yield Outcome(
+            heats if whole else heats.take(part),
+            ask,
+            some,
+            x,
+            state,
+            solved.converged[part],
+            solved.residual[part],
+            solved.steps[part],
+        )
 
 
 def complete_charge(outcome: Outcome) -> HeatTable:

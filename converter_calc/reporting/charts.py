@@ -221,7 +221,7 @@ def heat_bars_figure(
     figure = go.Figure(bars, layout(theme, 110 + 26 * len(flows), width, legend=True))
     figure.update_layout(
         xaxis=axis(theme, "heat, MJ", range=[0.0, 1.5 * float(flows["heat_MJ"].max())]),
-        yaxis=axis(theme, "", autorange="reversed"),
+        yaxis=axis(theme, "", autorange="reversed", showgrid=False),
         bargap=0.25,
     )
     return figure

@@ -52,14 +52,14 @@ def scrap_map_figure(
     feasible = _grid(part, "feasible")[2].astype(float)
     label, unit, _ = columns[quantity]
     title = f"{label}, {unit}" if unit else label
-    two_sided = quantity == "trim_kg" and bool(np.nanmin(z) < 0.0 < np.nanmax(z))
+    two_sided = quantity == "trim_kg" and bool((z < 0.0).any() and (z > 0.0).any())
     figure = go.Figure(layout=layout(theme, 460, width, legend=True))
     figure.add_trace(
         go.Contour(
             x=x, y=y, z=z, name=label, showscale=True, ncontours=16,
             colorscale=DIVERGING if two_sided else SEQUENTIAL,
-            zmid=0.0 if two_sided else None,
-            contours={"showlabels": True, "labelfont": {"size": 11}},
+            contours={"showlabels": True, "labelfont": {"size": 11}}
+            | (_even_levels(z) if two_sided else {}),
             line={"width": 0.6},
             colorbar={"title": {"text": title, "side": "right"}, "thickness": 14},
             text=_grid(part, "binding")[2],
@@ -72,7 +72,7 @@ def scrap_map_figure(
         figure.add_trace(
             go.Contour(x=x, y=y, z=1.0 - feasible, showscale=False, hoverinfo="skip",
                        showlegend=False, fillcolor=grey, line={"width": 2, "color": text},
-                       contours={"type": "constraint", "operation": ">", "value": 0.5})
+                       contours={"type": "constraint", "operation": "<", "value": 0.5})
         )  # fmt: skip
         figure.add_trace(_mark([None], [None], "cannot be made", symbol="square", color=grey))
     if two_sided:
@@ -282,6 +282,16 @@ def _grid(part: pd.DataFrame, name: str) -> tuple[Any, Any, Any]:
 def _over_both(part: pd.DataFrame, name: str) -> pd.DataFrame:
     """One column with temperature down and scrap share across."""
     return part.set_index(["hot_metal_temp_C", "scrap_share_pct"])[name].unstack()  # noqa: PD010
+
+
+def _even_levels(z: Any) -> dict[str, float]:
+    """Contour levels as far below zero as above it, so that zero has the middle colour."""
+    most = float(np.nanmax(np.abs(z)))
+    size = 10.0 ** np.floor(np.log10(most / 2.0))
+    if most / size > 10.0:
+        size *= 2.0
+    end = float(size * np.ceil(most / size))
+    return {"start": -end, "end": end, "size": float(size)}
 
 
 def _mark(

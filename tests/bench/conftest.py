@@ -39,8 +39,8 @@ def draw_heats(n: int, seed: int = 1) -> Any:
             "aim_P_pct": normal(0.016, 0.001),
             "heavy_scrap_kg": normal(32000.0, 3000.0),
             "light_scrap_kg": normal(13000.0, 1500.0),
-            "burnt_lime_kg": normal(8500.0, 700.0),
-            "dolomitic_lime_kg": normal(3500.0, 300.0),
+            "burnt_lime_kg": normal(6500.0, 450.0),
+            "dolomitic_lime_kg": normal(2700.0, 250.0),
             "lump_ore_kg": ore,
             "oxygen_Nm3": oxygen,
         }
