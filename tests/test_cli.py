@@ -270,7 +270,7 @@ def shown(text: str, label: str) -> tuple[float, str]:
 
 
 def test_us_units_convert_back() -> None:
-    """NIST SP 811 (from memory): short ton 907.18474 kg; scf at 60 °F, 1 atm: 0.026788 Nm3."""
+    """NIST SP 811 (from memory): short ton 907.18474 kg; scf at 60 °F, 1 atm."""
     metric, us = (run("plan", ORDINARY, "--units", units).stdout for units in ("metric", "us"))
     for label in ("hot metal ", "scrap, all", "burnt lime", "steel tapped", "liquid slag"):
         kg, unit = shown(metric, label)
@@ -280,8 +280,8 @@ def test_us_units_convert_back() -> None:
     for label in ("oxygen ", "volume"):
         (Nm3, _), (scf, unit) = shown(metric, label), shown(us, label)
         assert unit == "scf"
-        # Nm3 is printed to a whole number
-        assert scf * 0.0267881 == pytest.approx(Nm3, abs=0.6 + 2e-5 * Nm3), label
+        back = scf * 0.3048**3 * 273.15 / 288.7056
+        assert back == pytest.approx(Nm3, abs=0.6), label  # printed to a whole number
     celsius, fahrenheit = shown(metric, "temperature")[0], shown(us, "temperature")
     assert fahrenheit[1] == "F"
     assert (fahrenheit[0] - 32.0) / 1.8 == pytest.approx(celsius, abs=0.06)
@@ -348,3 +348,13 @@ def test_program_refuses(tmp_path: Path) -> None:
     result = shell("plan", file)
     assert result.returncode == 3
     assert "Traceback" not in result.stderr
+
+
+@pytest.mark.xfail(strict=True, reason="the sulphur law divides by the dissolved oxygen")
+def test_no_dissolved_oxygen_has_no_traceback(tmp_path: Path) -> None:
+    """0 is within the bounds of pin.end_O_ppm: a heat, a fault or exit 3, but no traceback."""
+    file = tmp_path / "dry.toml"
+    text = GOOD.replace("[aim]", "S_pct = 0.01\n[aim]") + "[pin]\nend_O_ppm = 0\n"
+    file.write_text(text, encoding="utf-8")
+    result = run("plan", file)
+    assert result.exit_code in (0, 2, 3)

@@ -46,7 +46,7 @@ tables = st.lists(
     min_size=ROWS,
     max_size=ROWS,
 ).map(pd.DataFrame)
-quick = settings(max_examples=8, deadline=None, suppress_health_check=[HealthCheck.too_slow])
+quick = settings(max_examples=6, deadline=None, suppress_health_check=[HealthCheck.too_slow])
 
 
 def table_of(frame: pd.DataFrame) -> HeatTable:
@@ -154,10 +154,10 @@ def test_more_lime_never_raises_phosphorus_while_it_dissolves(
 
 
 def test_the_lime_property_is_not_empty() -> None:
-    """Lime of the plain heat still dissolves with 5 kg/t more, so the property looks at it."""
+    """Lime of the plain heat still dissolves with 2 kg/t more, so the property looks at it."""
     planned_heat = converter_calc.plan(copy.deepcopy(PLAIN_HEAT))
     charge = complete_charge(planned_heat)
-    more = with_masses(charge, {"burnt_lime": charge.masses_kg["burnt_lime"] + 900.0})
+    more = with_masses(charge, {"burnt_lime": charge.masses_kg["burnt_lime"] + 360.0})
     outcome = converter_calc.predict(more)
     assert float(spread(lime_limit(outcome.p, outcome.x, outcome.state), 1)[0]) < 0.0
 
@@ -239,22 +239,23 @@ def test_one_heat_is_a_table_of_one_is_a_row_of_a_table(frame: pd.DataFrame) -> 
 
 
 def test_a_row_of_a_big_table_is_the_heat_alone() -> None:
-    """Chunks of the solver do not show: rows at both ends and in the middle of 10,000."""
+    """Chunks and shared starts of the solver do not show: no row depends on its company."""
     chance = np.random.default_rng(7)
     n = 10_000
     frame = pd.DataFrame({name: chance.uniform(*ends, n) for name, ends in RANGES.items()})
     table = converter_calc.plan(frame, SHOP)
-    rows = [0, 1, 4095, 4096, 8191, 8192, n // 2, n - 1]
+    unsolved = np.flatnonzero(table["status"] == "not converged")
+    rows = [0, 1, 2047, 2048, 4095, 4096, 8191, 8192, n // 2, n - 1, *unsolved[:5].tolist()]
     for row in rows:
         same(table.iloc[[row]], converter_calc.plan(frame.iloc[[row]], SHOP))
-    assert (table["status"] != "not converged").all()
+    assert not unsolved.size
 
 
 #: Heats that have no answer, each of its own kind.
 BAD = {
     "ice cold": {"hot_metal_temp_C": 1100.0, "hm_C_pct": 2.5, "hm_Si_pct": 0.0},
     "no phosphorus": {"aim_P_pct": 0.0005, "hm_P_pct": 0.4, "aim_C_pct": 0.5},
-    "no slag": {"hm_Si_pct": 0.0, "aim_basicity": 8.0, "aim_temp_C": 1800.0},
+    "no room in the slag": {"pin_slag_FeO_pct": 60.0, "pin_slag_Fe2O3_pct": 39.0},
 }
 
 

@@ -1,8 +1,8 @@
 """Solving a table of heats for one ask: chunks, a start from a sample, Newton for the rest.
 
 A long table is solved in two goes. A sample of its heats is solved by Newton with exact
-derivatives. A quadratic through their answers then predicts the answer of every heat to
-about a part in a thousand, and its inverse Jacobian, and a few quasi-Newton steps
+derivatives. A linear fit then predicts the answer of every heat to about a part in
+a hundred, and its inverse Jacobian, and a few quasi-Newton steps
 without derivatives bring it to the same tolerance. What is left, and every short table,
 goes through Newton; so the sample decides how long it takes, never what comes out.
 """
@@ -20,13 +20,13 @@ from converter_calc.balance.problem import Problem
 from converter_calc.balance.system import Recorded, System
 from converter_calc.basis.dual import Array
 from converter_calc.basis.tolerances import (
-    BLOCK,
     CHUNK,
     FITTED_FROM,
     FOLLOWED_STEPS,
     MOST_STEPS,
     QUICK_STEPS,
     RESIDUAL,
+    SAMPLE,
     SAMPLED_FROM,
 )
 
@@ -41,8 +41,6 @@ EXTENSIVE = {
     "trim_kg": 0.05,
     "heat_loss_J": 1e6,
 }
-#: Inputs that vary beyond this many make a full quadratic too long: squares only.
-MOST_CROSSED = 24
 #: Standard deviations at which an input is cut off in the fit, so that an outlier among the
 #: inputs does not throw its start far off.
 OUTLIER = 4.0
@@ -57,24 +55,28 @@ def solve_ask(p: Problem, ask: Ask, memory: Memory | None = None) -> Solved:
     raised for a heat that does not converge, and it does not touch its neighbours.
     """
     n = p.n
-    guess = first_guess(p, ask)
+    first = first_guess(p, ask)
+    guess = {name: x.copy() for name, x in first.items()}
     memory = Memory() if memory is None else memory
     system = System(p, ask, memory.recorded)
     solved = Solved(guess, np.full(n, np.inf), np.zeros(n, dtype=int), np.zeros(n, dtype=bool))
     fit = _fit_for(system, guess, memory.fits)
     if fit is not None:
-        for first in range(0, n, CHUNK):
-            rows = np.arange(first, min(first + CHUNK, n))
+        for begin in range(0, n, CHUNK):
+            rows = np.arange(begin, min(begin + CHUNK, n))
             x, unit, inverse = fit.predict(p.take(slice(rows[0], rows[-1] + 1)))
             x, residual = follow(system, x, unit, inverse, rows, FOLLOWED_STEPS)
             for name in guess:
                 solved.unknowns[name][rows] = x[name]
             solved.residual[rows] = residual
         solved.converged = solved.residual <= RESIDUAL
-    for steps in (QUICK_STEPS, MOST_STEPS):
+    # what stands badly starts again as it would alone, so that company makes no difference
+    for steps, afresh in ((QUICK_STEPS, False), (MOST_STEPS, True)):
         left = np.flatnonzero(~solved.converged)
-        for first in range(0, left.size, CHUNK):
-            _solve_rows(system, solved, left[first : first + CHUNK], steps)
+        for name, x in solved.unknowns.items() if afresh else ():
+            x[left] = first[name][left]
+        for begin in range(0, left.size, CHUNK):
+            _solve_rows(system, solved, left[begin : begin + CHUNK], steps)
     return solved
 
 
@@ -129,10 +131,10 @@ def _inputs(p: Problem) -> Array | None:
 
 @dataclass
 class Fit:
-    """Answers of a sample as functions of the inputs.
+    """Answers of a sample, and their inverse Jacobians, as linear functions of the inputs.
 
-    mean, deviation : of the inputs (d,). coefficients : of the quadratics in the inputs,
-    first those of the k answers, then those of the inverse Jacobian (k + k * k, m).
+    mean, deviation : of the inputs (d,). coefficients : first of the k answers, then of the
+    entries of the inverse Jacobian (k + k * k, 1 + d).
     """
 
     names: tuple[str, ...]
@@ -144,22 +146,23 @@ class Fit:
         """Start, units and inverse Jacobian of all heats of p."""
         count = len(self.names)
         inputs = _inputs(p)
-        both = np.empty((count + count * count, p.n))
-        for first in range(0, p.n, BLOCK):
-            rows = slice(first, first + BLOCK)
-            if inputs is None:
-                z = np.zeros((self.mean.size, both[:, rows].shape[1]))
-            else:
-                z = _standard(inputs[:, rows], self.mean, self.deviation)
-            np.matmul(self.coefficients, _quadratic(z), out=both[:, rows])
+        if inputs is None:
+            inputs = np.broadcast_to(self.mean[:, None], (self.mean.size, p.n))
+        found = self.coefficients @ _terms(inputs, self.mean, self.deviation)
         unit = units_of(p, self.names)
-        x = {name: both[k] * unit[name] for k, name in enumerate(self.names)}
-        inverse = [[both[count * (1 + u) + r] for r in range(count)] for u in range(count)]
+        x = {name: found[k] * unit[name] for k, name in enumerate(self.names)}
+        inverse = [[found[count * (1 + u) + r] for r in range(count)] for u in range(count)]
         return x, unit, inverse
 
 
 #: Fits by ask and names of the inputs that vary.
 Fits = dict[Any, Fit]
+
+
+def _terms(inputs: Array, mean: Array, deviation: Array) -> Array:
+    """One, and each input in standard deviations from its mean (1 + d, n)."""
+    z = (inputs - mean[:, None]) / deviation[:, None]
+    return np.concatenate([np.ones((1, inputs.shape[1])), np.clip(z, -OUTLIER, OUTLIER)])
 
 
 @dataclass
@@ -192,9 +195,8 @@ def _sample(system: System, guess: Unknowns) -> Fit | None:
     inputs = _inputs(p)
     if inputs is None:
         return None
-    d = inputs.shape[0]
-    size = 3 * (1 + 2 * d if d > MOST_CROSSED else (d + 1) * (d + 2) // 2)
-    rows = np.unique(np.linspace(0, p.n - 1, min(max(size, 64), p.n // 4)).astype(int))
+    size = max(SAMPLE, 6 * (1 + inputs.shape[0]))
+    rows = np.unique(np.linspace(0, p.n - 1, min(size, p.n // 4)).astype(int))
     begin = {name: x[rows] for name, x in guess.items()}
     solved = solve(system, begin, REACH, rows, QUICK_STEPS * 2)
     good = np.flatnonzero(solved.converged)
@@ -205,9 +207,9 @@ def _sample(system: System, guess: Unknowns) -> Fit | None:
     unit = units_of(p.take(rows), x)
     mean, deviation = inputs.mean(axis=1), inputs.std(axis=1)
     deviation[deviation == 0.0] = 1.0
-    terms = _quadratic(_standard(inputs[:, rows], mean, deviation)).T
     answers = np.stack([values / unit[name] for name, values in x.items()], axis=1)
     inverses = _inverse_jacobians(system, rows, x, unit).reshape(good.size, -1)
+    terms = _terms(inputs[:, rows], mean, deviation).T
     coefficients = np.linalg.lstsq(terms, np.hstack([answers, inverses]), rcond=1e-10)[0]
     return Fit(tuple(x), mean, deviation, np.ascontiguousarray(coefficients.T))
 

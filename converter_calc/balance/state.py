@@ -41,8 +41,10 @@ from converter_calc.thermo.slag_compounds import compound_heat_J
 GASES = ("CO", "CO2", "H2", "H2O", "N2", "Ar", "SO2", "O2")
 #: Between these temperatures [K] off-gas leaves the bath; dust is followed in one piece there.
 GAS_LEAVES_K = (1500.0, 2300.0)
+#: Oxygen that the sulphur law sees at the least [mass %], 0.1 ppm: keeps a pinned zero finite.
+LEAST_O_PCT = 1e-5
 #: Rounding of the corner where lime stops dissolving, as a share of the slag mass.
-LIME_CORNER = 0.003
+LIME_CORNER = 0.01
 
 
 @dataclass
@@ -451,7 +453,8 @@ def _sulphur(p: Problem, s: State) -> None:
 
     def ratio() -> Num:
         f_S = ad.pow10(0.11 * s.C_pct)
-        L = sulphur.partition_ratio(p.laws["sulphur"], s.slag_pct, s.T_K, s.O_pct, f_S)
+        oxygen = ad.sqrt(ad.square(s.O_pct) + LEAST_O_PCT * LEAST_O_PCT)
+        L = sulphur.partition_ratio(p.laws["sulphur"], s.slag_pct, s.T_K, oxygen, f_S)
         return L * p.values["S_approach"]
 
     def by_ratio() -> Num:

@@ -20,7 +20,7 @@ from converter_calc.basis.units import MJ, ZERO_C_K
 from converter_calc.thermo.enthalpy import enthalpy_J_kg
 
 #: Newton on a nearly straight line: the fourth step is at rounding.
-GAS_TEMPERATURE_STEPS = 5
+GAS_TEMPERATURE_STEPS = 4
 
 
 @dataclass

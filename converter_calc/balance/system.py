@@ -1,4 +1,8 @@
-"""The equations of an ask over a table of heats, recorded once and replayed in blocks."""
+"""The equations of an ask over a table of heats.
+
+Jacobians come from the residuals on `Dual`. Residuals alone, which the solver wants far more
+often, are recorded once and replayed in blocks where the table is long enough to pay for it.
+"""
 
 from __future__ import annotations
 
@@ -10,20 +14,27 @@ import numpy as np
 
 from converter_calc.balance.asks import Ask, evaluate_ask
 from converter_calc.balance.problem import Problem
-from converter_calc.basis.dual import Array, Dual, Num
-from converter_calc.basis.tape import Program, Tape, Trace, steady_name
-from converter_calc.basis.tolerances import BLOCK, BLOCK_WITH_SLOPES
+from converter_calc.basis import dual as ad
+from converter_calc.basis.dual import Array, Num
+from converter_calc.basis.tape import Program, Tape, steady_name
+from converter_calc.basis.tolerances import BLOCK, RECORDED_FROM
 
 Matrix = list[list[Any]]
 PARTS = ("values", "masks", "fixed", "hot_metal_pct")
+#: Programs by ask and by what does not differ between the heats.
+Recorded = dict[Any, Any]
 
 
-def _record(p: Problem, ask: Ask, *, slopes: bool) -> tuple[Tape, list[Any]]:
-    """Tape of the residuals, with their slopes by each unknown behind them if wanted."""
+def _is_array(x: Any) -> bool:
+    return isinstance(x, np.ndarray) and x.ndim > 0
+
+
+def _record(p: Problem, ask: Ask) -> tuple[Tape, list[Any]]:
+    """Tape of the residuals; every array of the givens becomes an input."""
     tape = Tape()
 
     def trace(name: str, x: Num) -> Num:
-        return tape.input(name) if isinstance(x, np.ndarray) and x.ndim else x
+        return tape.input(name) if _is_array(x) else x
 
     parts = {
         part: {name: trace(f"{part}:{name}", x) for name, x in getattr(p, part).items()}
@@ -36,32 +47,14 @@ def _record(p: Problem, ask: Ask, *, slopes: bool) -> tuple[Tape, list[Any]]:
         scale_kg=trace("scale_kg", p.scale_kg),
         cache={},
     )
-    unknowns: dict[str, Num] = {}
-    for name in ask.unknowns:
-        x = tape.input("x:" + name)
-        unknowns[name] = Dual(x, {name: 1.0}) if slopes else x
-    state = evaluate_ask(givens, ask, unknowns)
-    residuals = [state.residuals[name] for name in ask.residuals]
-    if not slopes:
-        return tape, residuals
-    table = [
-        r.d.get(name, 0.0) if isinstance(r, Dual) else 0.0
-        for r in residuals
-        for name in ask.unknowns
-    ]
-    return tape, [r.v if isinstance(r, Dual) else r for r in residuals] + [
-        x if isinstance(x, Trace) else float(x) for x in table
-    ]
-
-
-#: Programs by ask and by what does not differ between the heats.
-Recorded = dict[Any, Any]
+    state = evaluate_ask(givens, ask, {name: tape.input("x:" + name) for name in ask.unknowns})
+    return tape, [state.residuals[name] for name in ask.residuals]
 
 
 def _fixed_parts(p: Problem) -> Any:
     """What a recording takes as it stands: names of arrays, and all plain numbers."""
     return tuple(
-        (part, name, "array" if isinstance(x, np.ndarray) and x.ndim else float(x))
+        (part, name, "array" if _is_array(x) else float(x))
         for part in PARTS
         for name, x in getattr(p, part).items()
     )
@@ -70,66 +63,65 @@ def _fixed_parts(p: Problem) -> Any:
 class System:
     """Residuals and Jacobians of n heats for one ask.
 
+    recorded : programs of earlier systems that share the materials of `p`; added to.
     Raises nothing for values without sense: they come out as NaN or infinite.
     """
 
     def __init__(self, p: Problem, ask: Ask, recorded: Recorded | None = None) -> None:
         self.p, self.ask, self.n = p, ask, p.n
         self._recorded: Recorded = {} if recorded is None else recorded
-        self._programs: dict[bool, Program] = {}
-        self._arrays: dict[str, Array] = {
-            f"{part}:{name}": x
-            for part in PARTS
-            for name, x in getattr(p, part).items()
-            if isinstance(x, np.ndarray) and x.ndim
-        }
-        for name in ("hot_metal_J_kg", "scale_kg"):
-            x = getattr(p, name)
-            if isinstance(x, np.ndarray) and x.ndim:
-                self._arrays[name] = x
+        self._program: Program | None = None
+        self._arrays: dict[str, Array] = {}
         self._rows: Any = None
-        self._taken: dict[str, Array] = {}
+        self._taken: Any = None
 
-    def _program(self, *, slopes: bool) -> Program:
-        if slopes not in self._programs:
-            key = (self.ask, slopes, _fixed_parts(self.p))
-            if key not in self._recorded:
-                self._recorded[key] = self._record(slopes=slopes)
-            program, steady, names = self._recorded[key]
-            if steady is not None:
-                self._arrays |= dict(zip(names, steady.run(self._arrays, self.n), strict=True))
-                self._rows = None
-            self._programs[slopes] = program
-        return self._programs[slopes]
+    def jacobian(self, rows: Array, x: Mapping[str, Array]) -> tuple[list[Any], Matrix]:
+        """Residuals, and the derivative of each by each unknown; 0.0 where there is none."""
+        seeded = {name: ad.seed(values, name) for name, values in x.items()}
+        state = evaluate_ask(self._problem(rows), self.ask, seeded)
+        found = [state.residuals[name] for name in self.ask.residuals]
+        slopes = [[ad.slope(r, name) for name in self.ask.unknowns] for r in found]
+        return [ad.value(r) for r in found], slopes
 
-    def _record(self, *, slopes: bool) -> tuple[Program, Program | None, list[str]]:
-        """Program to replay, program of what no unknown moves, and the names of that."""
-        tape, outputs = _record(self.p, self.ask, slopes=slopes)
-        block = max(1, min(BLOCK_WITH_SLOPES if slopes else BLOCK, self.n))
-        if slopes or self.n == 1:
-            return Program(tape, outputs, block), None, []
-        rest, steady = tape.split(["x:" + name for name in self.ask.unknowns], outputs)
-        names = [steady_name(quantity.index) for quantity in steady]
-        return Program(rest, outputs, block), Program(tape, steady, block), names
-
-    def _run(self, rows: Any, x: Mapping[str, Array], *, slopes: bool) -> list[Any]:
-        program = self._program(slopes=slopes)
-        if self._rows is not rows:
-            whole = not isinstance(rows, slice) and len(rows) == self.n
-            self._taken = {
-                name: array if whole else array[rows] for name, array in self._arrays.items()
-            }
+    def residuals(self, rows: Array, x: Mapping[str, Array]) -> list[Any]:
+        """Residuals of the heats `rows`, one array (n,) a closure."""
+        if self._program is None and self.n < RECORDED_FROM:
+            state = evaluate_ask(self._problem(rows), self.ask, dict(x))
+            return [state.residuals[name] for name in self.ask.residuals]
+        if self._program is None:
+            self._program = self._prepare()
+        if self._rows is not rows or not isinstance(self._taken, dict):
+            whole = len(rows) == self.n
+            self._taken = {k: a if whole else a[rows] for k, a in self._arrays.items()}
             self._rows = rows
         inputs = self._taken | {"x:" + name: values for name, values in x.items()}
-        size = len(next(iter(x.values())))
-        return program.run(inputs, size)
+        return self._program.run(inputs, len(rows))
 
-    def residuals(self, rows: Any, x: Mapping[str, Array]) -> list[Any]:
-        """Residuals of some heats (indices or slice), one array (n,) a closure."""
-        return self._run(rows, x, slopes=False)
+    def _problem(self, rows: Array) -> Problem:
+        """The givens of some heats; those last asked for are kept at hand."""
+        if self._rows is not rows or not isinstance(self._taken, Problem):
+            self._taken = self.p if len(rows) == self.n else self.p.take(rows)
+            self._rows = rows
+        return self._taken
 
-    def jacobian(self, rows: Any, x: Mapping[str, Array]) -> tuple[list[Any], Matrix]:
-        """Residuals, and the derivative of each by each unknown; 0.0 where there is none."""
-        found = self._run(rows, x, slopes=True)
-        k = len(self.ask.unknowns)
-        return found[:k], [found[k + r * k : k + (r + 1) * k] for r in range(k)]
+    def _prepare(self) -> Program:
+        """The program to replay, with what no unknown moves worked out for all heats."""
+        key = (self.ask, _fixed_parts(self.p))
+        if key not in self._recorded:
+            tape, outputs = _record(self.p, self.ask)
+            rest, steady = tape.split(["x:" + name for name in self.ask.unknowns], outputs)
+            names = [steady_name(quantity.index) for quantity in steady]
+            block = min(BLOCK, self.n)
+            self._recorded[key] = Program(rest, outputs, block), Program(tape, steady, block), names
+        program, steady_program, names = self._recorded[key]
+        for part in PARTS:
+            for name, x in getattr(self.p, part).items():
+                if _is_array(x):
+                    self._arrays[f"{part}:{name}"] = x
+        for name in ("hot_metal_J_kg", "scale_kg"):
+            if _is_array(getattr(self.p, name)):
+                self._arrays[name] = getattr(self.p, name)
+        self._arrays |= dict(zip(names, steady_program.run(self._arrays, self.n), strict=True))
+        wanted = set(program.inputs)
+        self._arrays = {name: x for name, x in self._arrays.items() if name in wanted}
+        return program

@@ -312,6 +312,7 @@ class Program:
 
         self._code = []
         for function, where, target in code:
+            function = _WITH_OUT.get(function, function)
             a = [*(slot(part) for part in where), -1, -1]
             self._code.append((function, len(where), a[0], a[1], a[2], slot(target)))
         self._slots = [
@@ -360,6 +361,16 @@ def _replay(code: list[Any], registers: list[Any]) -> None:
             np.copyto(registers[out], registers[b], where=registers[a])
 
 
+def _maximum(a: Any, b: Any, out: Any) -> None:
+    np.maximum(a, b, out=out)
+
+
+def _minimum(a: Any, b: Any, out: Any) -> None:
+    np.minimum(a, b, out=out)
+
+
+#: Functions that take their output by name only.
+_WITH_OUT: dict[Any, Any] = {np.maximum: _maximum, np.minimum: _minimum}
 _TRUTH = {
     *(np.less, np.greater, np.less_equal, np.greater_equal, np.equal, np.not_equal),
     *(np.logical_and, np.logical_or, np.logical_not, np.isnan, np.isfinite),

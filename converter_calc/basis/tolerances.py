@@ -13,19 +13,21 @@ CLOSURE = 1e-9
 MOST_STEPS = 60
 #: Newton steps in a chunk before what is left is put aside and solved together.
 QUICK_STEPS = 4
-#: Rows from which a table is solved from a sample of its own heats: the sample and its fit
-#: cost about as much as 1500 heats by Newton. FOLLOWED_STEPS: most steps from there.
-SAMPLED_FROM = 6000
+#: Rows from which a table is solved from a sample of its own heats, and the least sample.
+SAMPLED_FROM = 3000
+SAMPLE = 200
+#: Rows from which residuals are recorded and replayed: recording costs about as much as
+#: working out the residuals of 10,000 heats.
+RECORDED_FROM = 2000
 #: Rows from which a fit at hand is used at all.
 FITTED_FROM = 64
-FOLLOWED_STEPS = 7
+FOLLOWED_STEPS = 8
 #: Halvings of one Newton step before it is taken all the same.
 MOST_HALVINGS = 6
 #: Heats worked on at once when a recorded formula is replayed: small enough for its buffers
 #: to stay in the second-level cache, large enough to make a numpy call (about 0.4
-#: microseconds) small beside its work. With derivatives there are more buffers.
+#: microseconds) small beside its work.
 BLOCK = 2048
-BLOCK_WITH_SLOPES = 1024
 #: Heats that go through the solver together.
 CHUNK = 8192
 #: Width at which the two sides of a complementarity condition meet, dimensionless.

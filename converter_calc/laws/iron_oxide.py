@@ -20,8 +20,9 @@ def total_iron_pct(C_pct: Num, T_K: Num, blowing: str = "combined", factor: Num 
 
     Returns
     -------
-    Num: factor x (a + b x + c x^2 + 0.0571 (T - 1923.15)), x = (C^2 + 0.005^2)^(-1/4), close
-    to 1/sqrt(C).
+    Num: factor x (a + b x + c x^2 + 0.0571 dT), x = (C^2 + 0.005^2)^(-1/4), close to
+    1/sqrt(C); dT = T - 1923.15 levels off smoothly at 150 K (0.3 % less at 50 K), beyond which
+    nothing is known and a straight line would let a hot heat run away.
 
     Raises
     ------
@@ -33,7 +34,10 @@ def total_iron_pct(C_pct: Num, T_K: Num, blowing: str = "combined", factor: Num 
     fit = pick(data["fit"], blowing, "way of blowing")
     floor = data["C_floor_pct"]
     x = 1.0 / ad.sqrt(ad.sqrt(ad.square(C_pct) + floor * floor))
-    iron = (x * fit["c"] + fit["b"]) * x + (T_K - data["reference_T_K"]) * data["per_K"]
+    rise = T_K - data["reference_T_K"]
+    fourth = ad.square(ad.square(rise * (1.0 / data["T_span_K"])))
+    bounded = rise / ad.sqrt(ad.sqrt(fourth + 1.0))
+    iron = (x * fit["c"] + fit["b"]) * x + bounded * data["per_K"]
     return (iron + fit["a"]) * factor
 
 

@@ -19,23 +19,23 @@ if TYPE_CHECKING:
 
 #: Our own colours, told apart with any colour vision (tests/test_charts.py measures it).
 PALETTE = {
-    "blue": "#2268b2",
-    "orange": "#e07b00",
-    "teal": "#0f9c86",
-    "plum": "#a23b79",
-    "yellow": "#e8c33a",
+    "blue": "#2960c9",
+    "orange": "#b85b0c",
+    "green": "#15c57d",
+    "plum": "#4b396f",
+    "yellow": "#ecc43d",
     "sky": "#7cc0f0",
-    "grey": "#7d8590",
+    "grey": "#70747a",
 }
 #: Colour of text and of grid lines by theme.
 THEMES = {"light": ("#1b1f24", "#d4d8de"), "dark": ("#eceff3", "#4a5059")}
 FLOW_COLOURS = {
-    "hot metal": "orange", "other charge": "grey", "carbon": "plum", "silicon": "teal",
+    "hot metal": "orange", "other charge": "grey", "carbon": "plum", "silicon": "green",
     "manganese": "sky", "phosphorus": "yellow", "iron to oxide": "blue", "steel": "orange",
-    "slag": "teal", "off-gas": "plum", "dust": "sky", "heat loss": "grey",
+    "slag": "green", "off-gas": "plum", "dust": "sky", "heat loss": "grey",
 }  # fmt: skip
 PLACE_COLOURS = {
-    "steel": "orange", "slag": "teal", "gas": "plum", "dust": "sky",
+    "steel": "orange", "slag": "green", "gas": "plum", "dust": "sky",
     "droplets and ejections": "yellow", "undissolved lime": "grey",
 }  # fmt: skip
 #: Height of all flow together, and of the slot that a one-line label needs [px].
