@@ -16,7 +16,8 @@ from typing import Any, TypeAlias
 import numpy as np
 import numpy.typing as npt
 
-Array: TypeAlias = npt.NDArray[np.float64]
+#: Floats unless a docstring says otherwise (masks, row numbers).
+Array: TypeAlias = npt.NDArray[Any]
 LN10 = float(np.log(10.0))
 
 
