@@ -350,7 +350,6 @@ def test_program_refuses(tmp_path: Path) -> None:
     assert "Traceback" not in result.stderr
 
 
-@pytest.mark.xfail(strict=True, reason="the sulphur law divides by the dissolved oxygen")
 def test_no_dissolved_oxygen_has_no_traceback(tmp_path: Path) -> None:
     """0 is within the bounds of pin.end_O_ppm: a heat, a fault or exit 3, but no traceback."""
     file = tmp_path / "dry.toml"

@@ -1,0 +1,1 @@
+"""The balance: inputs, charge, state, residuals, solver, streams."""

@@ -10,9 +10,10 @@ from dataclasses import dataclass
 import numpy as np
 
 from converter_calc.balance.closures import add_closures
+from converter_calc.balance.evaluation import evaluate
 from converter_calc.balance.newton import Reach, Unknowns
 from converter_calc.balance.problem import Problem
-from converter_calc.balance.state import State, evaluate
+from converter_calc.balance.state import State
 from converter_calc.basis.dual import Array, Num
 from converter_calc.basis.units import ZERO_C_K
 

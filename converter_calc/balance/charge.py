@@ -125,11 +125,11 @@ class Totals:
         self.elements[element] = kg if have is None else have + kg
 
     def of(self, element: str) -> Num:
-        """kg of an element; 0.0 where none was charged."""
+        """Kg of an element; 0.0 where none was charged."""
         return self.elements.get(element, 0.0)
 
 
 @cache
 def oxide_factor(oxide: str, element: str) -> float:
-    """kg of oxide per kg of the element in it."""
+    """Kg of oxide per kg of the element in it."""
     return molar_mass(oxide) / (parse_formula(oxide)[element] * molar_mass(element))

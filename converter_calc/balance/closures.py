@@ -9,7 +9,8 @@ from __future__ import annotations
 from collections.abc import Mapping
 
 from converter_calc.balance.problem import Problem
-from converter_calc.balance.state import LIME_CORNER, State
+from converter_calc.balance.products import LIME_CORNER
+from converter_calc.balance.state import State
 from converter_calc.basis import dual as ad
 from converter_calc.basis.dual import Num
 from converter_calc.basis.tolerances import CORNER
@@ -53,7 +54,7 @@ def lime(p: Problem, x: Mapping[str, Num], s: State) -> Num:
     return residual
 
 
-def lime_limit(p: Problem, x: Mapping[str, Num], s: State) -> Num:
+def lime_limit(p: Problem, _: Mapping[str, Num], s: State) -> Num:
     """Lime up to the point where it stops dissolving (the middle of the rounded corner)."""
     lumps = p.values["undissolved_lime_pct"] * 0.01
     dissolved = s.slag_pct["CaO"] * (s.slag_kg * 0.01)
@@ -86,6 +87,6 @@ def magnesia_flux(p: Problem, x: Mapping[str, Num], s: State) -> Num:
     return residual
 
 
-def steel(p: Problem, x: Mapping[str, Num], s: State) -> Num:
+def steel(p: Problem, _: Mapping[str, Num], s: State) -> Num:
     """Tapped steel is the weight asked for."""
     return s.steel_kg / p.values["aim_steel_kg"] - 1.0

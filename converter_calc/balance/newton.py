@@ -24,6 +24,8 @@ from converter_calc.basis.tolerances import (
 
 Unknowns = dict[str, Array]
 Matrix = list[list[Any]]
+#: Triangular factors in one matrix, and the inverse pivots.
+Factors = tuple[Matrix, list[Any]]
 
 
 class Equations(Protocol):
@@ -86,8 +88,9 @@ def factorise(J: Matrix) -> tuple[Matrix, list[Any], Any]:
     return A, inverse, trouble
 
 
-def substitute(A: Matrix, inverse: Sequence[Any], rhs: Sequence[Any]) -> list[Any]:
+def substitute(factors: Factors, rhs: Sequence[Any]) -> list[Any]:
     """Solution of the factored systems for one right-hand side a heat."""
+    A, inverse = factors
     k = len(rhs)
     y = list(rhs)
     for r in range(1, k):
@@ -121,11 +124,11 @@ def _norm(residuals: Sequence[Any], shape: tuple[int, ...]) -> Array:
     return size
 
 
-def newton_step(residuals: Sequence[Any], J: Matrix, n: int) -> tuple[list[Any], Any]:
+def newton_step(residuals: Sequence[Any], J: Matrix, n: int) -> tuple[list[Any], Factors]:
     """Full Newton step of n heats: (step a unknown, factors to step with again)."""
     A, inverse, trouble = factorise(J)
     rhs = [-residual for residual in residuals]
-    step = substitute(A, inverse, rhs)
+    step = substitute((A, inverse), rhs)
     bad = np.flatnonzero(np.broadcast_to(trouble, (n,)))
     if bad.size:
         full = dense(J, n)[bad]
@@ -281,7 +284,7 @@ def _advance(
     step: Sequence[Any],
     norm: Array,
     reach: Mapping[str, Reach],
-    factors: Any,
+    factors: Factors,
 ) -> tuple[Unknowns, Array]:
     """Take the step, shortened where it does not help, then reuse the factors while it pays."""
     names = list(x)
@@ -308,7 +311,7 @@ def _advance(
     for _ in range(2):
         if not (size > RESIDUAL).any():
             break
-        move = substitute(*factors, [-part for part in parts])
+        move = substitute(factors, [-part for part in parts])
         trial = {name: new[name] + d for name, d in zip(names, move, strict=True)}
         further = equations.residuals(here, trial)
         reached = _norm(further, here.shape)

@@ -73,8 +73,9 @@ def solve_ask(p: Problem, ask: Ask, memory: Memory | None = None) -> Solved:
     # what stands badly starts again as it would alone, so that company makes no difference
     for steps, afresh in ((QUICK_STEPS, False), (MOST_STEPS, True)):
         left = np.flatnonzero(~solved.converged)
-        for name, x in solved.unknowns.items() if afresh else ():
-            x[left] = first[name][left]
+        if afresh:
+            for name, values in solved.unknowns.items():
+                values[left] = first[name][left]
         for begin in range(0, left.size, CHUNK):
             _solve_rows(system, solved, left[begin : begin + CHUNK], steps)
     return solved
@@ -174,19 +175,6 @@ class Memory:
 
     fits: Fits = field(default_factory=dict)
     recorded: Recorded = field(default_factory=dict)
-
-
-def _standard(inputs: Array, mean: Array, deviation: Array) -> Array:
-    z = (inputs - mean[:, None]) / deviation[:, None]
-    return np.asarray(np.clip(z, -OUTLIER, OUTLIER))
-
-
-def _quadratic(z: Array) -> Array:
-    """1, all inputs, all products of two (squares only where there are many), (m, n)."""
-    d, n = z.shape
-    if d > MOST_CROSSED:
-        return np.concatenate([np.ones((1, n)), z, z * z])
-    return np.concatenate([np.ones((1, n)), z, *(z[k] * z[k:] for k in range(d))])
 
 
 def _sample(system: System, guess: Unknowns) -> Fit | None:

@@ -13,8 +13,9 @@ from typing import Any
 import numpy as np
 
 from converter_calc.balance.charge import Content, elements_of
+from converter_calc.balance.heat import gas_enthalpies
 from converter_calc.balance.problem import Problem
-from converter_calc.balance.state import GASES, State, gas_enthalpies
+from converter_calc.balance.state import GASES, State
 from converter_calc.basis.dual import Array, Num
 from converter_calc.basis.units import MJ, ZERO_C_K
 from converter_calc.thermo.enthalpy import enthalpy_J_kg
@@ -136,7 +137,6 @@ class Closure:
 
 def closures_of(streams: Iterable[Stream], heat_loss_J: Num, n: int) -> dict[str, Closure]:
     """Closure of every element [kg] and, under "energy", of enthalpy with the heat loss [MJ]."""
-
     sums: dict[str, dict[str, Any]] = {}
     heat = {"in": np.zeros(n), "out": np.zeros(n) + heat_loss_J / MJ}
     for stream in streams:

@@ -42,7 +42,10 @@ def _record(p: Problem, ask: Ask) -> tuple[Tape, list[Any]]:
     }
     givens = replace(
         p,
-        **parts,
+        values=parts["values"],
+        masks=parts["masks"],
+        fixed=parts["fixed"],
+        hot_metal_pct=parts["hot_metal_pct"],
         hot_metal_J_kg=trace("hot_metal_J_kg", p.hot_metal_J_kg),
         scale_kg=trace("scale_kg", p.scale_kg),
         cache={},
@@ -113,6 +116,7 @@ class System:
             names = [steady_name(quantity.index) for quantity in steady]
             block = min(BLOCK, self.n)
             self._recorded[key] = Program(rest, outputs, block), Program(tape, steady, block), names
+        program: Program
         program, steady_program, names = self._recorded[key]
         for part in PARTS:
             for name, x in getattr(self.p, part).items():

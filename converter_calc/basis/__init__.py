@@ -1,0 +1,1 @@
+"""What everything stands on: units, errors, tolerances, elements, derivatives."""

@@ -84,7 +84,8 @@ class Dual:
                 term = slope * factor
                 d[key] = d[key] - term if key in d else -term
             return Dual(value, d)
-        return self * (1.0 / other)
+        inverse = 1.0 / other
+        return Dual(self.v * inverse, {key: slope * inverse for key, slope in self.d.items()})
 
     def __rtruediv__(self, other: Any) -> Dual:
         value = other / self.v
@@ -114,21 +115,22 @@ def slope(x: Num, key: str) -> Any:
     return x.d.get(key, 0.0) if isinstance(x, Dual) else 0.0
 
 
-def _unary(x: Num, f: Callable[[Any], Any], df: Callable[[Any, Any], Any]) -> Num:
+def _unary(x: Num, f: Callable[[Any], Any], slope_of: Callable[[Any, Any], Any]) -> Num:
+    """f(x), with slope_of(value of x, value of f) as its derivative."""
     if isinstance(x, Dual):
         y = f(x.v)
-        return x.chain(y, df(x.v, y))
+        return x.chain(y, slope_of(x.v, y))
     return f(x)
 
 
 def exp(x: Num) -> Num:
-    """e to the x."""
-    return _unary(x, np.exp, lambda v, y: y)
+    """Exponential of x."""
+    return _unary(x, np.exp, lambda _, y: y)
 
 
 def log(x: Num) -> Num:
     """Natural logarithm of x, x > 0."""
-    return _unary(x, np.log, lambda v, y: 1.0 / v)
+    return _unary(x, np.log, lambda v, _: 1.0 / v)
 
 
 def log10(x: Num) -> Num:
@@ -143,16 +145,16 @@ def pow10(x: Num) -> Num:
 
 def sqrt(x: Num) -> Num:
     """Square root of x, x > 0 (at 0 the derivative is infinite)."""
-    return _unary(x, np.sqrt, lambda v, y: 0.5 / y)
+    return _unary(x, np.sqrt, lambda _, y: 0.5 / y)
 
 
 def square(x: Num) -> Num:
-    """x times x."""
-    return _unary(x, np.square, lambda v, y: 2.0 * v)
+    """Square of x."""
+    return _unary(x, np.square, lambda v, _: 2.0 * v)
 
 
 def where(condition: Any, a: Num, b: Num) -> Num:
-    """a where the condition holds, else b; derivatives likewise."""
+    """A where the condition holds, else b; derivatives likewise."""
     if isinstance(a, Dual) or isinstance(b, Dual):
         da = a.d if isinstance(a, Dual) else {}
         db = b.d if isinstance(b, Dual) else {}

@@ -132,7 +132,7 @@ class Tape:
         Returns a tape in which such quantities, where others need them, are inputs themselves,
         named `steady_name`, and the list of these quantities on this tape.
         """
-        moves = set()
+        moves: set[int] = set()
         for index, (function, arguments) in enumerate(self.nodes):
             if function in varying if isinstance(function, str) else bool(moves & set(arguments)):
                 moves.add(index)
@@ -166,32 +166,19 @@ class Tape:
 
 def _fold(function: Any, inputs: tuple[Any, ...]) -> Any:
     """The result where one of the inputs is a number that makes the operation void."""
-    if function is np.where:
-        condition = inputs[0]
-        if not isinstance(condition, Trace):
-            return inputs[1] if condition else inputs[2]
-        return None
+    if function is np.where and not isinstance(inputs[0], Trace):
+        return inputs[1] if inputs[0] else inputs[2]
     if len(inputs) != 2:
         return None
-    a, b = inputs
-    number_a, number_b = not isinstance(a, Trace), not isinstance(b, Trace)
-    if function is np.multiply:
-        if number_b and float(b) == 1.0:
-            return a
-        if number_a and float(a) == 1.0:
-            return b
-        if (number_a and float(a) == 0.0) or (number_b and float(b) == 0.0):
-            return 0.0
-    if function is np.add:
-        if number_a and float(a) == 0.0:
-            return b
-        if number_b and float(b) == 0.0:
-            return a
-    if function is np.subtract and number_b and float(b) == 0.0:
-        return a
-    if function is np.divide and number_a and float(a) == 0.0:
+    a, b = (None if isinstance(x, Trace) else float(x) for x in inputs)
+    if function is np.multiply and 0.0 in (a, b):
         return 0.0
-    return None
+    if function is np.divide and a == 0.0:
+        return 0.0
+    void = 1.0 if function is np.multiply else 0.0
+    if function in (np.multiply, np.add, np.subtract) and b == void:
+        return inputs[0]
+    return inputs[1] if function in (np.multiply, np.add) and a == void else None
 
 
 def steady_name(index: int) -> str:
@@ -228,21 +215,17 @@ class Program:
 
     def _compile(self, tape: Tape, needed: set[int]) -> None:
         """Give each operation a register, used again once its quantity is no longer needed."""
-        order = sorted(needed)
         kept = {int(x) for x, traced in zip(self.outputs, self._is_trace, strict=True) if traced}
         last: dict[int, int] = {}
-        for index in order:
-            for a in tape.nodes[index][1]:
-                if isinstance(a, int):
-                    last[a] = index
+        for index in sorted(needed):
+            last |= {a: index for a in tape.nodes[index][1] if isinstance(a, int)}
         self._numbers: list[float] = []
-        self._bools = 0
-        self._floats = 0
+        self._counts = {"bool": 0, "float": 0}
         self._matrices: list[int] = []
         place: dict[int, tuple[str, int]] = {}
         code: list[tuple[Any, tuple[Any, ...], Any]] = []
         free: dict[str, list[int]] = {"float": [], "bool": []}
-        for index in order:
+        for index in sorted(needed):
             function, arguments = tape.nodes[index]
             if isinstance(function, str):
                 place[index] = ("input", self.inputs.index(function))
@@ -250,43 +233,46 @@ class Program:
             where = tuple(
                 place[a] if isinstance(a, int) else ("number", self._number(a)) for a in arguments
             )
-            if isinstance(function, tuple) and function[0] == "row":
-                place[index] = ("matrix", where[0][1] * _ROWS + function[1])
-                continue
             if isinstance(function, tuple):
-                self._matrices.append(function[1])
-                place[index] = ("block", len(self._matrices) - 1)
-                code.append((function[0], where, place[index]))
+                place[index] = self._matrix_place(function, where)
+                if place[index][0] == "block":
+                    code.append((function[0], where, place[index]))
                 continue
-            for a in dict.fromkeys(a for a in arguments if isinstance(a, int)):
-                if last[a] == index and a not in kept and place[a][0] in free:
-                    # np.where reads its inputs after writing, so it gets a register of its own
-                    if function is not np.where:
-                        free[place[a][0]].append(place[a][1])
+            done = [
+                place[a]
+                for a in dict.fromkeys(a for a in arguments if isinstance(a, int))
+                if last[a] == index and a not in kept and place[a][0] in free
+            ]
+            # np.where reads its inputs after writing, so it may not write into one of them
+            early = [] if function is np.where else done
+            for kind, number in early:
+                free[kind].append(number)
             kind = "bool" if function in _TRUTH else "float"
             place[index] = (kind, free[kind].pop() if free[kind] else self._new(kind))
             code.append((function, where, place[index]))
-            if function is np.where:
-                for a in dict.fromkeys(a for a in arguments if isinstance(a, int)):
-                    if last[a] == index and a not in kept and place[a][0] in free:
-                        free[place[a][0]].append(place[a][1])
+            for old, number in done if function is np.where else ():
+                free[old].append(number)
         self._bind(code, place)
+
+    def _matrix_place(self, function: tuple[Any, int], where: Any) -> tuple[str, int]:
+        """Place of a function that writes rows, or of one of its rows."""
+        if function[0] == "row":
+            return ("matrix", where[0][1] * _ROWS + function[1])
+        self._matrices.append(function[1])
+        return ("block", len(self._matrices) - 1)
 
     def _number(self, x: float) -> int:
         self._numbers.append(x)
         return len(self._numbers) - 1
 
     def _new(self, kind: str) -> int:
-        if kind == "bool":
-            self._bools += 1
-            return self._bools - 1
-        self._floats += 1
-        return self._floats - 1
+        self._counts[kind] += 1
+        return self._counts[kind] - 1
 
     def _bind(self, code: list[Any], place: dict[int, tuple[str, int]]) -> None:
         """Lay out the memory of one block; inputs come first and are filled in at each run."""
-        floats = np.empty((self._floats, self.block))
-        bools = np.empty((self._bools, self.block), dtype=bool)
+        floats = np.empty((self._counts["float"], self.block))
+        bools = np.empty((self._counts["bool"], self.block), dtype=bool)
         matrices = [np.empty((count, self.block)) for count in self._matrices]
         self._registers: list[Any] = [None] * len(self.inputs)
         slots: dict[tuple[str, int], int] = {}
@@ -311,8 +297,8 @@ class Program:
             return slots[where]
 
         self._code = []
-        for function, where, target in code:
-            function = _WITH_OUT.get(function, function)
+        for recorded, where, target in code:
+            function = _WITH_OUT.get(recorded, recorded)
             a = [*(slot(part) for part in where), -1, -1]
             self._code.append((function, len(where), a[0], a[1], a[2], slot(target)))
         self._slots = [

@@ -1,0 +1,1 @@
+"""What a user asks: plan, predict, limits, grades, explanations, sweeps."""

@@ -180,7 +180,7 @@ def _charge(outcome: Outcome) -> list[Caution]:
 
 def _law_ranges(outcome: Outcome) -> list[Caution]:
     s, p = outcome.state, outcome.p
-    found = []
+    found: list[Caution] = []
     if p.mask("pin_L_P") is True or p.mask("pin_end_P_pct") is True:
         return found
     law = p.laws["phosphorus"]

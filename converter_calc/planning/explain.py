@@ -132,7 +132,7 @@ def _lime_reason(outcome: Outcome, i: int) -> str:
         return "Lime follows the pinned CaO of the slag:"
     least = float(values["aim_basicity"][i])
     B = float(at(outcome.state.basicity, i))
-    if B > least * (1.0 + 1e-6):
+    if least * (1.0 + 1e-6) < B:
         return (
             f"The phosphorus aim asks for more lime than the least basicity of {least:g} "
             f"(CaO/SiO2 reaches {B:.2f}):"
@@ -152,7 +152,9 @@ def _lime(outcome: Outcome, i: int) -> Explanation:
         Term("CaO in the liquid slag (as analysed)", dissolved, "kg"),
         Term("CaO left undissolved", float(at(s.undissolved_kg, i)), "kg"),
         Term(
-            "CaO at which dissolution stops", float(at(s.laws["lime_limit_pct"], i)), "% of slag",
+            "CaO at which dissolution stops",
+            float(at(s.laws["lime_limit_pct"], i)),
+            "% of slag",
             source_of("lime"),
         ),
         Term("CaO lost with dust", float(at(s.dust_kg.get("CaO", 0.0), i)), "kg"),

@@ -107,8 +107,11 @@ def judge_grade(outcome: Outcome) -> None:
         mark_infeasible(
             outcome,
             np.array([row]),
-            lambda r, c=worst: f"tramp limit of grade {outcome.heats.grade}: {tell_tramp(c, r)}",
-            lambda r, c=worst: _frees(c, r),
+            [
+                (f"tramp limit of grade {outcome.heats.grade}: {tell_tramp(worst, r)}")
+                for r in np.array([row]).tolist()
+            ],
+            [_frees(worst, r) for r in np.array([row]).tolist()],
         )
 
 

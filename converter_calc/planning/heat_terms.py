@@ -69,7 +69,9 @@ def stream_formation_J(stream: Stream) -> Num:
     if stream.kind == "slag":
         oxides = {name: kg for name, kg in species.items() if name in SLAG_OXIDES}
         return slag_enthalpy(tuple(oxides)).formation_J(oxides)
-    return sum((kg * formation_J_kg(_as_charged(name, stream)) for name, kg in species.items()), 0.0)
+    return sum(
+        (kg * formation_J_kg(_as_charged(name, stream)) for name, kg in species.items()), 0.0
+    )
 
 
 def _as_charged(species: str, stream: Stream) -> str:
@@ -96,7 +98,9 @@ def heat_terms(outcome: Outcome) -> list[HeatTerm]:
     reactions = _reactions(outcome)
     terms += reactions
     known: Num = sum((term.heat_MJ for term in reactions), 0.0)
-    terms.append(HeatTerm("other reactions (sulphur, water, fluorspar)", "reactions", formed / MJ - known))
+    terms.append(
+        HeatTerm("other reactions (sulphur, water, fluorspar)", "reactions", formed / MJ - known)
+    )
     terms.append(HeatTerm("heat loss", "loss", -outcome.state.heat_loss_J / MJ))
     return [term for term in terms if np.any(np.abs(np.asarray(term.heat_MJ)) > 1e-9)]
 
@@ -125,7 +129,9 @@ def _reactions(outcome: Outcome) -> list[HeatTerm]:
         for oxide, label in OXIDATION.items()
         if oxide in net
     ]
-    terms.append(HeatTerm("slag formation (silicates, phosphates, ferrites)", "reactions", compounds / MJ))
+    terms.append(
+        HeatTerm("slag formation (silicates, phosphates, ferrites)", "reactions", compounds / MJ)
+    )
     terms.append(HeatTerm("taking carbonates, hydroxides and rust apart", "reactions", apart / MJ))
     return terms
 

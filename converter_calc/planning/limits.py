@@ -76,15 +76,21 @@ def _judge_lime(
         mark_infeasible(
             outcome,
             np.array([row]),
-            lambda _: (
-                f"phosphorus (aim.P_pct): at the most lime that dissolves the steel ends at "
-                f"{P:.4g} % P, the aim is {aim_P:.4g} % P"
-            ),
-            lambda _: [
-                "a lower tapping temperature",
-                "more iron oxide in the slag (lower end carbon, softer blow)",
-                "two slags, or hot metal treated for phosphorus before",
-                "less phosphorus in hot metal and scrap",
+            [
+                (
+                    f"phosphorus (aim.P_pct): at the most lime that dissolves the steel ends at "
+                    f"{P:.4g} % P, the aim is {aim_P:.4g} % P"
+                )
+                for _ in np.array([row]).tolist()
+            ],
+            [
+                [
+                    "a lower tapping temperature",
+                    "more iron oxide in the slag (lower end carbon, softer blow)",
+                    "two slags, or hot metal treated for phosphorus before",
+                    "less phosphorus in hot metal and scrap",
+                ]
+                for _ in np.array([row]).tolist()
             ],
             [end_point_of(best, place)],
         )
@@ -92,11 +98,17 @@ def _judge_lime(
         mark_infeasible(
             outcome,
             np.array([row]),
-            lambda _: (
-                f"basicity (aim.basicity): lime stops dissolving at CaO/SiO2 = {B:.2f}, "
-                f"the least asked for is {aim_B:.2f}"
-            ),
-            lambda _: ["a lower aim.basicity", "more fluid slag (more iron oxide)"],
+            [
+                (
+                    f"basicity (aim.basicity): lime stops dissolving at CaO/SiO2 = {B:.2f}, "
+                    f"the least asked for is {aim_B:.2f}"
+                )
+                for _ in np.array([row]).tolist()
+            ],
+            [
+                ["a lower aim.basicity", "more fluid slag (more iron oxide)"]
+                for _ in np.array([row]).tolist()
+            ],
             [end_point_of(most, place)],
         )
 
@@ -135,11 +147,17 @@ def _short_of_heat(outcome: Outcome) -> None:
     mark_infeasible(
         outcome,
         rows,
-        lambda _: "heat: the hot metal is too cold or too lean to reach the aim without fuel",
-        lambda row: [
-            f'about {fuel[place[row]]:.0f} kg of {name} as fuel (choice.ask = "trim")',
-            "hotter hot metal or hot metal richer in silicon",
-            "a lower tapping temperature",
+        [
+            ("heat: the hot metal is too cold or too lean to reach the aim without fuel")
+            for _ in rows.tolist()
+        ],
+        [
+            [
+                f'about {fuel[place[row]]:.0f} kg of {name} as fuel (choice.ask = "trim")',
+                "hotter hot metal or hot metal richer in silicon",
+                "a lower tapping temperature",
+            ]
+            for row in rows.tolist()
         ],
         nearest,
     )
@@ -161,13 +179,17 @@ def _no_trim(outcome: Outcome) -> None:
         mark_infeasible(
             outcome,
             rows,
-            lambda row, need=need, name=name, stock=stock: (
-                f"stock: the heat needs {need[row]:.0f} kg of {name}, {stock:.0f} kg are at hand"
-            ),
-            lambda _, name=name: [
-                f"more {name} (materials.{name}.stock_kg)",
-                "another share of scrap",
-                "another tapping temperature",
+            [
+                (f"stock: the heat needs {need[row]:.0f} kg of {name}, {stock:.0f} kg are at hand")
+                for row in rows.tolist()
+            ],
+            [
+                [
+                    f"more {name} (materials.{name}.stock_kg)",
+                    "another share of scrap",
+                    "another tapping temperature",
+                ]
+                for _ in rows.tolist()
             ],
             nearest,
         )
@@ -231,17 +253,24 @@ def _scrap_limits(outcome: Outcome) -> None:
     mark_infeasible(
         outcome,
         rows,
-        lambda row: (
-            f"{name[row]}: the heat balance asks for {scrap[row]:.0f} kg of scrap, "
-            f"{cap[row]:.0f} kg are allowed"
-        ),
-        lambda row: [
+        [
             (
-                f"about {trim[place[row]]:.0f} kg of {coolant} as coolant beside {cap[row]:.0f} "
-                'kg of scrap (choice.ask = "trim" with charge.scrap_kg)'
-            ),
-            "less hot metal",
-            "a higher limit or stock of scrap",
+                f"{name[row]}: the heat balance asks for {scrap[row]:.0f} kg of scrap, "
+                f"{cap[row]:.0f} kg are allowed"
+            )
+            for row in rows.tolist()
+        ],
+        [
+            [
+                (
+                    f"about {trim[place[row]]:.0f} kg of {coolant} as coolant beside "
+                    f"{cap[row]:.0f} "
+                    'kg of scrap (choice.ask = "trim" with charge.scrap_kg)'
+                ),
+                "less hot metal",
+                "a higher limit or stock of scrap",
+            ]
+            for row in rows.tolist()
         ],
         nearest,
     )
@@ -258,12 +287,16 @@ def _largest_shares(outcome: Outcome) -> None:
         mark_infeasible(
             outcome,
             rows,
-            lambda row, share=share, name=name, most=most: (
-                f"materials.{name}.max_share_pct: {name} is {share[row]:.1f} % of the scrap, "
-                f"{most:.1f} % are allowed"
-            ),
-            lambda _, name=name, most=most: [
-                f"{name} at {most:.1f} % of the scrap or less (choice.scrap_mix)"
+            [
+                (
+                    f"materials.{name}.max_share_pct: {name} is {share[row]:.1f} % of the scrap, "
+                    f"{most:.1f} % are allowed"
+                )
+                for row in rows.tolist()
+            ],
+            [
+                [f"{name} at {most:.1f} % of the scrap or less (choice.scrap_mix)"]
+                for _ in rows.tolist()
             ],
             _with_share(outcome, rows, name, most) if rows.size else None,
         )
@@ -291,11 +324,14 @@ def _stocks(outcome: Outcome) -> None:
         mark_infeasible(
             outcome,
             rows,
-            lambda row, need=need, name=name, stock=stock: (
-                f"materials.{name}.stock_kg: the heat needs {need[row]:.0f} kg of {name}, "
-                f"{stock:.0f} kg are at hand"
-            ),
-            lambda _, name=name: [f"more {name}", f"another material in place of {name}"],
+            [
+                (
+                    f"materials.{name}.stock_kg: the heat needs {need[row]:.0f} kg of {name}, "
+                    f"{stock:.0f} kg are at hand"
+                )
+                for row in rows.tolist()
+            ],
+            [[f"more {name}", f"another material in place of {name}"] for _ in rows.tolist()],
             _with_stock(outcome, rows, name, stock) if rows.size else None,
         )
 
@@ -335,20 +371,26 @@ def _weights(outcome: Outcome) -> None:
         mark_infeasible(
             outcome,
             rows,
-            lambda row, have=have, most=most, limit=limit, label=label, unit=unit: (
-                f"limit.{limit}: {have[row]:.0f} {unit} of {label}, "
-                f"{most[row]:.0f} {unit} are allowed"
-            ),
-            lambda row, have=have, most=most, label=label: [
+            [
                 (
-                    f"a heat smaller by {100.0 * (1.0 - most[row] / have[row]):.1f} %, which "
-                    "reaches the same aim"
-                ),
-                *(
-                    ["less silicon in the hot metal", "a higher P aim or lower aim.basicity"]
-                    if label == "slag"
-                    else []
-                ),
+                    f"limit.{limit}: {have[row]:.0f} {unit} of {label}, "
+                    f"{most[row]:.0f} {unit} are allowed"
+                )
+                for row in rows.tolist()
+            ],
+            [
+                [
+                    (
+                        f"a heat smaller by {100.0 * (1.0 - most[row] / have[row]):.1f} %, which "
+                        "reaches the same aim"
+                    ),
+                    *(
+                        ["less silicon in the hot metal", "a higher P aim or lower aim.basicity"]
+                        if label == "slag"
+                        else []
+                    ),
+                ]
+                for row in rows.tolist()
             ],
             _smaller(outcome, rows, most[rows] / have[rows]) if rows.size else None,
         )

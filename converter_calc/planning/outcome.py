@@ -7,17 +7,18 @@ units of the shop.
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass
+from dataclasses import field as default
 from functools import cached_property
 from typing import Any
 
 import numpy as np
 
 from converter_calc.balance.asks import Ask
-from converter_calc.balance.charge import molar_mass
+from converter_calc.balance.heat import sensible_heat_out_J
 from converter_calc.balance.heats import HeatTable
 from converter_calc.balance.problem import Problem
-from converter_calc.balance.state import State, sensible_heat_out_J
+from converter_calc.balance.state import State
 from converter_calc.balance.streams import (
     Closure,
     Stream,
@@ -27,6 +28,7 @@ from converter_calc.balance.streams import (
     streams_of,
 )
 from converter_calc.basis.dual import Array, Num
+from converter_calc.basis.elements import molar_mass
 from converter_calc.basis.tolerances import CLOSURE
 from converter_calc.basis.units import MJ, NM3_MOL, ZERO_C_K
 
@@ -39,7 +41,7 @@ class Caution:
     field: str
     mask: Any
     text: str
-    values: dict[str, Num] = field(default_factory=dict)
+    values: dict[str, Num] = default(default_factory=dict)
 
     def message(self, index: int) -> str:
         """Text for one heat."""
@@ -53,7 +55,7 @@ def at(x: Num, index: int) -> Any:
 
 
 def spread(x: Num, n: int) -> Array:
-    """x as an array of n heats."""
+    """X as an array of n heats."""
     return np.array(np.broadcast_to(np.asarray(x, dtype=float), (n,)))
 
 
@@ -75,11 +77,11 @@ class Outcome:
     converged: Array
     residual: Array
     steps: Array
-    status: list[str] = field(default_factory=list)
-    binding: list[str] = field(default_factory=list)
-    frees: list[list[str]] = field(default_factory=list)
-    nearest: list[dict[str, float]] = field(default_factory=list)
-    cautions: list[Caution] = field(default_factory=list)
+    status: list[str] = default(default_factory=list)
+    binding: list[str] = default(default_factory=list)
+    frees: list[list[str]] = default(default_factory=list)
+    nearest: list[dict[str, float]] = default(default_factory=list)
+    cautions: list[Caution] = default(default_factory=list)
 
     @property
     def n(self) -> int:
@@ -112,7 +114,8 @@ class Outcome:
         """What to charge [kg] and to blow [Nm3]; what comes along unasked is left out."""
         unasked = ("carryover_slag", "retained_slag", "lining")
         masses = {name: kg for name, kg in self.charged_kg.items() if name not in unasked}
-        recipe = {"hot_metal_kg": self.state.hot_metal_kg, "scrap_total_kg": self.kind_kg("scrap")}
+        recipe: dict[str, Num] = {"hot_metal_kg": self.state.hot_metal_kg}
+        recipe["scrap_total_kg"] = self.kind_kg("scrap")
         recipe |= {name + "_kg": kg for name, kg in masses.items()}
         recipe["oxygen_Nm3"] = self.state.oxygen_Nm3
         if self.state.stirring_kg:
@@ -153,27 +156,34 @@ class Outcome:
         return (sensible_heat_out_J(self.state) + self.state.heat_loss_J) / MJ
 
     def cost(self) -> Num:
-        """Cost of what is charged per tonne of steel, in the shop's currency; NaN without prices."""
-        price, kg = 0.0, self.recipe()
-        for name in self.charged_kg:
-            per_t = self.heats.materials[name].price_per_t
-            if per_t is not None and name + "_kg" in kg:
-                price = price + kg[name + "_kg"] * 1e-3 * per_t
-        for item, mass in (
-            ("hot_metal_per_t", self.state.hot_metal_kg * 1e-3),
-            ("oxygen_per_Nm3", self.state.oxygen_Nm3),
-        ):
-            if "price_" + item in self.p.values:
-                price = price + mass * self.p.values["price_" + item]
-        return price / (self.state.steel_kg * 1e-3)
+        """Cost of what has a price, per tonne of steel, in the shop's currency.
+
+        NaN where nothing charged has a price.
+        """
+        found: Num = None
+        kg = self.recipe()
+        priced = [
+            (kg[name + "_kg"] * 1e-3, self.heats.materials[name].price_per_t)
+            for name in self.charged_kg
+            if name + "_kg" in kg
+        ]
+        priced += [
+            (self.state.hot_metal_kg * 1e-3, self.p.get("price_hot_metal_per_t")),
+            (self.state.oxygen_Nm3, self.p.get("price_oxygen_per_Nm3")),
+        ]
+        for amount, price in priced:
+            if price is not None and np.all(np.isfinite(price)):
+                part = amount * price
+                found = part if found is None else found + part
+        return np.nan if found is None else found / (self.state.steel_kg * 1e-3)
 
     def columns(self) -> dict[str, Any]:
         """The table of results, a column a quantity, arrays (n,)."""
         s, n = self.state, self.n
         table: dict[str, Any] = {"heat_id": np.array(self.heats.ids, dtype=object)}
         table["status"] = np.array(self.status, dtype=object)
-        numbers: dict[str, Num] = dict(self.recipe())
-        numbers |= {
+        numbers: dict[str, Num] = self.recipe()
+        more: dict[str, Num] = {
             "end_temp_C": s.T_K - ZERO_C_K,
             **{f"end_{el}_pct": pct for el, pct in self.steel_pct().items() if el != "O"},
             "end_O_ppm": s.O_pct * 1e4,
@@ -192,7 +202,7 @@ class Outcome:
             **{name: s.laws[name] for name in ("L_P", "L_Mn", "L_S") if name in s.laws},
             "cost_per_t": self.cost(),
         }
-        table |= {name: spread(x, n) for name, x in numbers.items()}
+        table |= {name: spread(x, n) for name, x in (numbers | more).items()}
         table["warnings"] = self.warning_codes()
         return table
 

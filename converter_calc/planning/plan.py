@@ -12,7 +12,6 @@ from converter_calc.balance.asks import Ask
 from converter_calc.balance.heats import (
     HeatTable,
     heats_from_dict,
-    heats_from_frame,
     read_heat_file,
 )
 from converter_calc.balance.solving import Memory
@@ -25,7 +24,7 @@ from converter_calc.planning.outcome import Outcome
 from converter_calc.planning.solving import plan_groups, predict_groups, solve_in_parts
 
 if TYPE_CHECKING:
-    import pandas as pd
+    pass
 
 Groups = list[tuple[Array, HeatTable, Ask]]
 

@@ -109,9 +109,7 @@ def derivatives(
         for c, name in enumerate(unknown):
             by_x[:, c] = ad.slope(output, name)
         total = np.einsum("nu,nug->ng", by_x, dx)
-        found[label] = {
-            name: total[:, c] + ad.slope(output, name) for c, name in enumerate(names)
-        }
+        found[label] = {name: total[:, c] + ad.slope(output, name) for c, name in enumerate(names)}
     return found
 
 

@@ -86,7 +86,7 @@ def _share_out(frame: pd.DataFrame, shop: Any, solve: Solve, workers: int) -> Co
                 shared[row, first:last] = columns[name]
             texts = {name: _packed(x) for name, x in columns.items() if x.dtype == object}
             queue.put((place, numbers, texts, None))
-        except Exception as error:  # noqa: BLE001 - handed to the caller, who raises it
+        except Exception as error:
             queue.put((place, [], {}, error))
 
     parts = list(enumerate(itertools.pairwise(edges)))
@@ -171,7 +171,7 @@ def result_columns(outcome: Outcome) -> dict[str, Any]:
     table = outcome.columns()
     table.pop("heat_id")
     bad = np.array([status != "solved" for status in outcome.status], dtype=bool)
-    for name, values in table.items():  # an unsolved heat shows no numbers of its own
+    for values in table.values():  # an unsolved heat shows no numbers of its own
         if bad.any() and values.dtype != object:
             values[bad] = np.nan
     table["binding"] = np.array(outcome.binding, dtype=object)

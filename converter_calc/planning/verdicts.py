@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Sequence
 
 import numpy as np
 
@@ -27,15 +27,15 @@ def still_open(outcome: Outcome) -> Array:
 def mark_infeasible(
     outcome: Outcome,
     rows: Array,
-    binding: Callable[[int], str],
-    frees: Callable[[int], list[str]],
+    binding: Sequence[str],
+    frees: Sequence[list[str]],
     nearest: list[EndPoint] | None = None,
 ) -> None:
-    """Mark heats as infeasible; `nearest` holds the end point that each row can reach."""
+    """Mark heats as infeasible; binding, frees and nearest hold an entry for each of `rows`."""
     for place, row in enumerate(rows.tolist()):
         outcome.status[row] = "infeasible"
-        outcome.binding[row] = binding(row)
-        outcome.frees[row] = frees(row)
+        outcome.binding[row] = binding[place]
+        outcome.frees[row] = frees[place]
         if nearest is not None:
             outcome.nearest[row] = nearest[place]
 

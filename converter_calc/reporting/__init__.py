@@ -1,0 +1,1 @@
+"""Sheets, tables, charts and exports of results."""

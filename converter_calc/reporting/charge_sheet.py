@@ -12,13 +12,19 @@ from converter_calc.reporting.display import SYSTEMS, Display
 #: Shown on every sheet. ILO code of practice, Safety and health in the iron and steel
 #: industry (from memory); CO limits: common handbook value.
 SAFETY = (
-    "No moisture, ice, closed vessels, ammunition or oily turnings in the scrap; never hot "
-    "metal onto a wet vessel or wet scrap.",
+    (
+        "No moisture, ice, closed vessels, ammunition or oily turnings in the scrap; never hot "
+        "metal onto a wet vessel or wet scrap."
+    ),
     "Off-gas holds carbon monoxide: poisonous, and explosive in air from 12.5 to 74 %.",
-    "Slopping: mind silicon, slag weight, freeboard, soft blow and late ore. Never above the "
-    "vessel's working weight.",
-    "A calculation, not an instruction: local codes, the shop's own practice and its licensed "
-    "engineers decide.",
+    (
+        "Slopping: mind silicon, slag weight, freeboard, soft blow and late ore. Never above the "
+        "vessel's working weight."
+    ),
+    (
+        "A calculation, not an instruction: local codes, the shop's own practice and its licensed "
+        "engineers decide."
+    ),
 )
 WIDTH = 84
 
@@ -74,7 +80,7 @@ def _recipe(outcome: Outcome, i: int, show: Display) -> list[str]:
         lines.append(_row("scrap share", f"{share:.2f}", "%"))
     cost = float(at(outcome.cost(), i))
     if np.isfinite(cost) and cost > 0.0:
-        lines.append(_row("materials per tonne of steel", f"{cost:,.2f}", "shop currency"))
+        lines.append(_row("priced items per tonne steel", f"{cost:,.2f}", "shop currency"))
     return [*lines, ""]
 
 
@@ -114,9 +120,13 @@ def _slag(outcome: Outcome, i: int, show: Display) -> list[str]:
     steel = float(at(s.steel_kg, i))
     lines = ["Slag", _mass("liquid slag", float(at(s.slag_kg, i)), steel, show)]
     pct = {name: float(at(x, i)) for name, x in outcome.slag_pct().items()}
-    parts = [f"{name} {x:.2f}" for name, x in sorted(pct.items(), key=lambda e: -e[1]) if x >= 0.005]
-    for k in range(0, len(parts), 6):
-        lines.append("    " + "  ".join(parts[k : k + 6]) + (" %" if k + 6 >= len(parts) else ""))
+    parts = [
+        f"{name} {x:.2f}" for name, x in sorted(pct.items(), key=lambda e: -e[1]) if x >= 0.005
+    ]
+    lines += [
+        "    " + "  ".join(parts[k : k + 6]) + (" %" if k + 6 >= len(parts) else "")
+        for k in range(0, len(parts), 6)
+    ]
     lines.append(_row("CaO/SiO2", f"{float(at(s.basicity, i)):.2f}", ""))
     lines.append(_row("total iron", f"{float(at(s.laws['T_Fe_pct'], i)):.2f}", "%"))
     for label, kg in (
@@ -146,7 +156,12 @@ def _gas(outcome: Outcome, i: int, show: Display) -> list[str]:
     parts = [f"{name} {100.0 * x / total:.1f}" for name, x in volumes.items() if x > 5e-4 * total]
     return [
         "Off-gas",
-        _row("volume", f"{show.gas_of(total):,.0f}", show.gas, f"leaves at {temp:,.0f} {show.temperature}"),
+        _row(
+            "volume",
+            f"{show.gas_of(total):,.0f}",
+            show.gas,
+            f"leaves at {temp:,.0f} {show.temperature}",
+        ),
         "    " + "  ".join(parts) + " vol %",
         "",
     ]
@@ -164,16 +179,11 @@ def _heat(outcome: Outcome, i: int, show: Display) -> list[str]:
 
 
 def _closure(outcome: Outcome, i: int) -> list[str]:
-    worst = max(
-        (abs(float(at(c.relative, i))), name) for name, c in outcome.closures.items()
-    )
+    worst = max((abs(float(at(c.relative, i))), name) for name, c in outcome.closures.items())
     energy = float(at(outcome.closures["energy"].relative, i))
     loss = float(at(outcome.state.heat_loss_J, i)) / MJ
-    return [
-        f"Balance: worst closure {worst[0]:.1e} ({worst[1]}), energy {energy:.1e}; "
-        f"heat loss {loss:,.0f} MJ",
-        "",
-    ]
+    text = f"Balance: worst closure {worst[0]:.1e} ({worst[1]}), energy {energy:.1e}; "
+    return [f"{text}heat loss {loss:,.0f} MJ", ""]
 
 
 def _warnings(outcome: Outcome, i: int) -> list[str]:

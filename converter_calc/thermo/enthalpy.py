@@ -304,7 +304,6 @@ class EnthalpySet:
         table[:, 0] += self._offsets
         return _Interval(table, np.array(cp))
 
-
     def at(self, T_K: Num) -> tuple[Any, Any]:
         """Enthalpies, and heat capacities if T is a Dual (else None), one row a member.
 

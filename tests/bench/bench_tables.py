@@ -84,7 +84,9 @@ def test_a_million_heats_grow_in_proportion_and_stay_small(report: Callable[[str
     t_small = min(seconds(lambda: converter_calc.predict(small, shop=SHOP)) for _ in range(3))
     t_large = seconds(lambda: converter_calc.predict(large, shop=SHOP))
     peak = psutil.Process().memory_info().rss / 1e9
-    report(f"1,000,000 heats: {t_large:.1f} s, {t_large / t_small:.1f} times 100,000; {peak:.2f} GB")
+    report(
+        f"1,000,000 heats: {t_large:.1f} s, {t_large / t_small:.1f} times 100,000; {peak:.2f} GB"
+    )
     assert t_large / t_small <= 11.0
     assert peak < 2.0
 
@@ -94,11 +96,15 @@ def test_command_line_start(report: Callable[[str], None]) -> None:
 
     def run(*args: str) -> float:
         return min(
-            seconds(lambda: subprocess.run([sys.executable, *args], check=True, capture_output=True))
+            seconds(
+                lambda: subprocess.run([sys.executable, *args], check=True, capture_output=True)
+            )
             for _ in range(5)
         )
 
     imports = run("-c", "import numpy, scipy.optimize, pandas")
     plan = run("-m", "converter_calc", "plan", str(DEMO))
-    report(f"command line: {plan:.2f} s, imports of the peers {imports:.2f} s: {plan / imports:.2f}")
+    report(
+        f"command line: {plan:.2f} s, imports of the peers {imports:.2f} s: {plan / imports:.2f}"
+    )
     assert plan / imports <= 1.5
