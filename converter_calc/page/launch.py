@@ -1,0 +1,50 @@
+"""Start of the page's server: on this machine only, nothing sent anywhere."""
+
+from __future__ import annotations
+
+import sys
+from pathlib import Path
+
+#: Server settings; the same stand in .streamlit/config.toml for `streamlit run app.py`.
+SETTINGS = {
+    "server.address": "127.0.0.1",
+    "server.headless": "true",
+    "server.fileWatcherType": "none",
+    "server.maxUploadSize": "5",
+    "server.allowedHosts": '["localhost", "127.0.0.1"]',
+    "browser.gatherUsageStats": "false",
+    "client.toolbarMode": "minimal",
+    "client.showErrorDetails": "type",
+    "client.disableDataExport": "true",
+}
+
+
+def arguments(port: int) -> list[str]:
+    """The command line of the server."""
+    script = Path(__file__).with_name("script.py")
+    flags = [f"--{name}={value}" for name, value in SETTINGS.items()]
+    return ["streamlit", "run", str(script), f"--server.port={port}", *flags]
+
+
+def launch(port: int = 8501) -> None:
+    """Run the server until it is stopped.
+
+    Raises InputError where streamlit is not installed or the port is taken.
+    """
+    import socket
+
+    from converter_calc.basis.errors import Fault, InputError
+
+    with socket.socket() as probe:
+        probe.setsockopt(socket.SOL_SOCKET, socket.SO_REUSEADDR, 1)
+        try:
+            probe.bind(("127.0.0.1", port))
+        except OSError as error:
+            message = f"{port} is taken or not allowed; give another port"
+            raise InputError([Fault("--port", message)]) from error
+    try:
+        from streamlit.web import cli
+    except ImportError as error:
+        raise InputError([Fault("page", "streamlit is not installed")]) from error
+    sys.argv = arguments(port)
+    sys.exit(cli.main())
