@@ -9,7 +9,7 @@ still pay (Shamanskii's modification, Ukrain. Mat. Zh. 19 (1967) 118; from memor
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import Any, Protocol
 
 import numpy as np
@@ -18,6 +18,7 @@ from converter_calc.basis.dual import Array
 from converter_calc.basis.tolerances import (
     MOST_HALVINGS,
     MOST_STEPS,
+    NARROWED_FROM,
     RESIDUAL,
     RESIDUAL_STALLED,
 )
@@ -195,32 +196,66 @@ def follow(
     memory).
     """
     names = list(x)
-    taken: list[list[Any]] = []
-    squares: list[Any] = []
-    best, least = x, np.full(indices.shape, np.inf)
+    best = {name: np.array(values) for name, values in x.items()}
+    least = np.full(indices.shape, np.inf)
+    run = _Run(np.arange(indices.size), indices, x, dict(unit), [list(row) for row in inverse])
     with np.errstate(all="ignore"):
-        for _ in range(steps):
-            parts = equations.residuals(indices, x)
-            size = _norm(parts, indices.shape)
-            better = size < least
-            if better.all():
-                best, least = x, size
-            else:
-                best = {name: np.where(better, x[name], best[name]) for name in names}
-                least = np.where(better, size, least)
-            if (least <= RESIDUAL).all():
+        for step in range(steps):
+            parts = equations.residuals(run.rows, run.x)
+            size = _norm(parts, run.rows.shape)
+            better = size < least[run.places]
+            at = run.places[better]
+            least[at] = size[better]
+            for name in names:
+                best[name][at] = run.x[name][better]
+            open_ = np.flatnonzero(least[run.places] > RESIDUAL)
+            if not open_.size:
                 break
-            z = [-_dot(row, parts) for row in inverse]
-            for old, new, square in zip(taken, taken[1:], squares, strict=False):
+            if step >= NARROWED_FROM and open_.size < 0.7 * run.places.size:
+                run = run.narrowed(open_)
+                parts = [_cut(part, open_) for part in parts]
+            z = [-_dot(row, parts) for row in run.inverse]
+            for old, new, square in zip(run.taken, run.taken[1:], run.squares, strict=False):
                 along = _dot(old, z) / square
                 z = [a + along * b for a, b in zip(z, new, strict=True)]
-            if taken:
-                stretch = 1.0 / (1.0 - _dot(taken[-1], z) / squares[-1])
+            if run.taken:
+                stretch = 1.0 / (1.0 - _dot(run.taken[-1], z) / run.squares[-1])
                 z = [a * stretch for a in z]
-            taken.append(z)
-            squares.append(_dot(z, z) + 1e-300)
-            x = {name: x[name] + a * unit[name] for name, a in zip(names, z, strict=True)}
+            run.taken.append(z)
+            run.squares.append(_dot(z, z) + 1e-300)
+            run.x = {
+                name: run.x[name] + a * run.unit[name] for name, a in zip(names, z, strict=True)
+            }
     return best, least
+
+
+def _cut(x: Any, keep: Array) -> Any:
+    return x[keep] if isinstance(x, np.ndarray) and x.ndim else x
+
+
+@dataclass
+class _Run:
+    """What the quasi-Newton steps of some heats remember; places: where they stand in all."""
+
+    places: Array
+    rows: Array
+    x: Unknowns
+    unit: dict[str, Any]
+    inverse: list[list[Any]]
+    taken: list[list[Any]] = field(default_factory=list)
+    squares: list[Any] = field(default_factory=list)
+
+    def narrowed(self, keep: Array) -> _Run:
+        """The same for some of the heats."""
+        return _Run(
+            self.places[keep],
+            self.rows[keep],
+            {name: values[keep] for name, values in self.x.items()},
+            {name: _cut(values, keep) for name, values in self.unit.items()},
+            [[_cut(entry, keep) for entry in row] for row in self.inverse],
+            [[_cut(part, keep) for part in step] for step in self.taken],
+            [_cut(square, keep) for square in self.squares],
+        )
 
 
 def _dot(a: Sequence[Any], b: Sequence[Any]) -> Any:

@@ -15,20 +15,22 @@ MOST_STEPS = 60
 QUICK_STEPS = 4
 #: Rows from which a table is solved from a sample of its own heats, and the least sample.
 SAMPLED_FROM = 3000
-SAMPLE = 200
+SAMPLE = 120
 #: Rows from which residuals are recorded and replayed: recording costs about as much as
 #: working out the residuals of 10,000 heats.
 RECORDED_FROM = 2000
 #: Rows from which a fit at hand is used at all.
 FITTED_FROM = 64
-FOLLOWED_STEPS = 8
+FOLLOWED_STEPS = 11
+#: Step from which only the heats that are not solved yet go on.
+NARROWED_FROM = 5
 #: Halvings of one Newton step before it is taken all the same.
 MOST_HALVINGS = 6
-#: Heats worked on at once when a recorded formula is replayed: small enough for its buffers
-#: to stay in the second-level cache, large enough to make a numpy call (about 0.4
-#: microseconds) small beside its work.
-BLOCK = 2048
-#: Heats that go through the solver together.
+#: Heats worked on at once when a recorded formula is replayed, and that go through the solver
+#: together: large enough to make a numpy call (about 1 microsecond) small beside its work, small
+#: enough for the buffers (about 50) to stay in the last-level cache. Measured from 1024 to
+#: 16384: half the time of 1024, flat from here on.
+BLOCK = 4096
 CHUNK = 8192
 #: Width at which the two sides of a complementarity condition meet, dimensionless.
 CORNER = 1e-8

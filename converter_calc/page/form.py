@@ -36,7 +36,17 @@ LEFT_OUT = {
     "predict": {"aim_steel_kg"},
 }
 #: Sections that a shop file holds; the others belong to the heat.
-SHOP_SECTIONS = ("name", "materials", "practice", "choice", "law", "price", "limit", "grades", "tap")
+SHOP_SECTIONS = (
+    "name",
+    "materials",
+    "practice",
+    "choice",
+    "law",
+    "price",
+    "limit",
+    "grades",
+    "tap",
+)
 #: Tables that have no fields of their own; they are carried along as they came.
 CARRIED = ("materials", "grades", "tap")
 TEXTS = ("heat_id", "why", "name")
@@ -84,7 +94,9 @@ def form_of(document: Mapping[str, Any]) -> Form:
     form.fields = {name: number_text(x) for name, x in givens.numbers.items()}
     form.fields |= {f"hm_{el}_pct": number_text(x) for el, x in givens.elements.items()}
     form.fields |= {f"{name}_kg": number_text(kg) for name, kg in givens.masses_kg.items()}
-    form.fields |= {name: text for name, text in givens.texts.items() if name not in ("shop", "ask")}
+    form.fields |= {
+        name: text for name, text in givens.texts.items() if name not in ("shop", "ask")
+    }
     form.order = list(givens.scrap_order)
     form.mix = {} if form.order else {
         name: number_text(share) for name, share in givens.shares.get("scrap_mix", {}).items()

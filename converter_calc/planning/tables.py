@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import gc
 import itertools
 import mmap
 import os
@@ -79,6 +80,7 @@ def _share_out(frame: pd.DataFrame, shop: Any, solve: Solve, workers: int) -> Co
     queue = context.SimpleQueue()
 
     def work(place: int, first: int, last: int) -> None:
+        gc.disable()  # a process that ends soon need not tidy up
         try:
             columns = _solve_part(frame.iloc[first:last], shop, solve)
             numbers = [name for name, x in columns.items() if x.dtype != object]
@@ -91,8 +93,10 @@ def _share_out(frame: pd.DataFrame, shop: Any, solve: Solve, workers: int) -> Co
 
     parts = list(enumerate(itertools.pairwise(edges)))
     runs = [context.Process(target=work, args=(place, *edge)) for place, edge in parts]
+    gc.freeze()  # the children then do not copy pages only to count references
     for run in runs:
         run.start()
+    gc.unfreeze()
     found = sorted((queue.get() for _ in runs), key=lambda answer: answer[0])
     for run in runs:
         run.join()

@@ -24,6 +24,8 @@ def draw_heats(n: int, seed: int = 1) -> Any:
     # oxygen as a shop would blow it: by weight and analysis, with the spread of a static blow
     oxygen = 10050.0 + 1700.0 * (carbon - 4.45) + 1500.0 * (silicon - 0.45)
     oxygen += 0.055 * (hot_metal - 180000.0) - 0.2 * (ore - 1200.0) + normal(0.0, 60.0)
+    # lime likewise follows silicon, with the spread of weighing and of rules of thumb
+    lime = 6300.0 + 11000.0 * (silicon - 0.45) + normal(0.0, 250.0)
     return pd.DataFrame(
         {
             "hot_metal_kg": hot_metal,
@@ -39,7 +41,7 @@ def draw_heats(n: int, seed: int = 1) -> Any:
             "aim_P_pct": normal(0.016, 0.001),
             "heavy_scrap_kg": normal(32000.0, 3000.0),
             "light_scrap_kg": normal(13000.0, 1500.0),
-            "burnt_lime_kg": normal(6500.0, 450.0),
+            "burnt_lime_kg": lime,
             "dolomitic_lime_kg": normal(2700.0, 250.0),
             "lump_ore_kg": ore,
             "oxygen_Nm3": oxygen,

@@ -1,0 +1,158 @@
+"""Lime and phosphorus: the chosen law, the band of all published laws, and what drives them."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+import streamlit as st
+
+from converter_calc.balance.heats import HeatTable
+from converter_calc.basis.errors import Fault, InputError
+from converter_calc.page.balance_view import show_figure
+from converter_calc.page.markup import fault_texts, heading, note, put, rows_of, table_html
+from converter_calc.page.numbers import number_text, parse_number
+from converter_calc.page.session import answer, form, guarded, replace_form, theme, write_address
+from converter_calc.planning.lime_sweeps import (
+    LimeLines,
+    lime_curve,
+    lime_lines,
+    phosphorus_effects,
+)
+from converter_calc.planning.outcome import at
+from converter_calc.reporting.exports import csv_text
+from converter_calc.reporting.sweep_charts import (
+    EFFECTS,
+    effect_figure,
+    effect_text,
+    lime_band,
+    lime_figure,
+    lime_lines_table,
+    lime_text,
+)
+
+POINTS = 25
+MOST_LIME_KG = 100_000.0
+
+
+def lime_view() -> None:
+    """The whole view; what is changed in it redraws only it."""
+    _lime_fragment()
+
+
+@st.fragment
+def _lime_fragment() -> None:
+    guarded(_lime)
+
+
+def _lime() -> None:
+    found = answer()
+    if found.heats is None:
+        put(note("fault", "The heat is not right yet; see Plan a heat.", fault_texts(found.faults)))
+        return
+    if form().question == "predict":
+        put(note("note", "Lime is a question of planning: choose another question under Plan a "
+                 "heat."))  # fmt: skip
+        return
+    usual = 8000.0
+    if found.outcome is not None:
+        kg = found.outcome.charged_kg.get(found.heats.choices.lime, 0.0)
+        usual = max(float(at(kg, 0)), 1000.0)
+    low, high = _range(0.5 * usual, 2.0 * usual)
+    curve, lines, effects = _worked_out(found.heats, low, high)
+    put(heading("End phosphorus against lime"))
+    show_figure(lime_figure(curve, lines, theme()), "lime_curve", lime_text(curve, lines))
+    _carry_back(lines)
+    rows = [
+        (row.line, "–" if np.isnan(row.lime_kg) else f"{row.lime_kg:,.0f}")
+        for row in rows_of(lime_lines_table(lines))
+    ]
+    put(heading("Lines on the lime axis"))
+    put(table_html("lines", ("line", "lime, kg"), rows))
+    _band(curve)
+    put(heading("What else moves phosphorus"))
+    put("Lime holds the basicity of the plan while one thing changes; the law is the chosen one.")
+    for kind, table in effects.items():
+        put(heading("Against " + EFFECTS[kind][1]))
+        show_figure(effect_figure(table, kind, theme()), "effect_" + kind, effect_text(table, kind))
+        column, title = EFFECTS[kind]
+        rows = [
+            (f"{row[column]:,.4g}", f"{row['end_P_pct']:.4f}", f"{row['L_P']:.1f}",
+             f"{row['lime_kg']:,.0f}")
+            for row in table.to_dict("records")
+        ]  # fmt: skip
+        put(table_html(kind, (title, "end phosphorus, mass %", "L_P", "lime, kg"), rows))
+
+
+def _range(low: float, high: float) -> tuple[float, float]:
+    """The range of lime: about the plan's at first, then as typed [kg]."""
+    ends, faults = [], []
+    with st.container(horizontal=True):
+        for label, usual in (("Lime from, kg", low), ("Lime to, kg", high)):
+            usual = round(usual, -2)
+            text = st.text_input(label, key=f"lime_{label}", placeholder=f"{usual:g}", width=150)
+            x = usual
+            if text:
+                try:
+                    x = parse_number(text)
+                except ValueError as error:
+                    faults.append(Fault(label, str(error)))
+                if not 0.0 <= x <= MOST_LIME_KG:
+                    faults.append(Fault(label, f"{x:g} is outside 0 to {MOST_LIME_KG:g} kg"))
+            ends.append(x)
+    if not faults and ends[1] <= ends[0]:
+        faults.append(Fault("Lime to, kg", "must be more than where the range starts"))
+    if faults:
+        raise InputError(faults)
+    return ends[0], ends[1]
+
+
+def _worked_out(heats: HeatTable, low: float, high: float) -> tuple[Any, LimeLines, Any]:
+    key = (id(heats), low, high)
+    kept = st.session_state.get("cc_lime")
+    if kept is None or kept[0] != key:
+        with st.spinner("The curves are worked out"):
+            curve = lime_curve(heats, np.linspace(low, high, POINTS))
+            kept = key, (curve, lime_lines(heats, curve), phosphorus_effects(heats)), heats
+        st.session_state["cc_lime"] = kept
+    found: tuple[Any, LimeLines, Any] = kept[1]
+    return found
+
+
+def _carry_back(lines: LimeLines) -> None:
+    """The lime for the aim, and one click that puts it into the plan."""
+    kg = lines.for_aim_kg.get(lines.law, np.nan)
+    name = lines.lime.replace("_", " ")
+    if not np.isfinite(kg):
+        why = "the heat has no phosphorus aim" if np.isnan(lines.aim_P_pct) else (
+            "no lime that dissolves meets the phosphorus aim")  # fmt: skip
+        put(note("note", f"Nothing to carry to the plan: {why}."))
+        return
+    text = f"{kg:,.0f} kg of {name} meet the aim of {lines.aim_P_pct:.4g} % P by {lines.law}."
+    if np.isfinite(lines.least_basicity_kg) and kg < lines.least_basicity_kg:
+        text += f" The least basicity asks for more: {lines.least_basicity_kg:,.0f} kg."
+    put(text)
+    st.button(f"Plan with {kg:,.0f} kg of {name}", key="carry_lime", on_click=_carry,
+              args=(f"{lines.lime}_kg", kg))  # fmt: skip
+    if form().fields.get(f"{lines.lime}_kg"):
+        st.button("Let the plan find the lime again", key="free_lime", on_click=_carry,
+                  args=(f"{lines.lime}_kg", None))  # fmt: skip
+
+
+def _carry(name: str, kg: float | None) -> None:
+    new = form().copy()
+    new.fields[name] = "" if kg is None else number_text(round(kg))
+    replace_form(new)
+    write_address()
+
+
+def _band(curve: Any) -> None:
+    rows = [
+        (f"{row.lime_kg:,.0f}", f"{row.chosen_P_pct:.4f}", f"{row.lowest_P_pct:.4f}",
+         f"{row.highest_P_pct:.4f}")
+        for row in rows_of(lime_band(curve).iloc[::2])
+    ]  # fmt: skip
+    put(heading("The chosen law and the spread of all"))
+    put(table_html("laws", ("lime, kg", "chosen law, % P", "lowest, % P", "highest, % P"), rows))
+    st.download_button("Curves as CSV", csv_text(curve), "lime_phosphorus.csv", "text/csv",
+                       key="lime_csv", on_click="ignore")  # fmt: skip

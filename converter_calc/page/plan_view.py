@@ -1,0 +1,77 @@
+"""Plan a heat: fields on the left, recipe on the right; a change redraws only this."""
+
+from __future__ import annotations
+
+import streamlit as st
+
+from converter_calc.page.inputs import all_fields, question_choice
+from converter_calc.page.markup import heading, put, rows_of, table_html
+from converter_calc.page.reasons import figures, reason_for
+from converter_calc.page.results import amount, answer_html, term_rows
+from converter_calc.page.session import Answer, answer, form, guarded, write_address
+from converter_calc.planning.outcome import Outcome
+from converter_calc.reporting import tables
+
+
+def plan_view() -> None:
+    """The whole view, in one fragment so that the rest of the page is not built anew."""
+    _plan_fragment()
+
+
+@st.fragment
+def _plan_fragment() -> None:
+    guarded(_plan)
+
+
+def _plan() -> None:
+    question_choice()
+    left, right = st.columns([9, 11], gap="large")
+    with left:
+        all_fields()
+    found = answer()
+    if found.outcome is not None and form().question != "predict":
+        st.session_state["cc_planned"] = found.outcome
+    with right:
+        put(answer_html(found))
+        if found.outcome is not None:
+            _reasons(found.outcome)
+        _inputs_used(found)
+    write_address()
+    if st.session_state.get("cc_address_too_long"):
+        put("This heat is too long for an address; save it under Files to keep or share it.")
+
+
+def _reasons(outcome: Outcome) -> None:
+    put(heading("Why this number"))
+    for figure in figures(outcome):
+        digits = 4 if figure.unit == "%" else None
+        shown = f"{figure.name}: {amount(figure.value, digits)} {figure.unit}"
+        opened = st.expander(shown, key=f"why_{figure.name}", on_change="rerun")
+        if opened.open:
+            with opened:
+                reason = reason_for(outcome, figure)
+                rows = term_rows((t.label, t.value, t.unit, t.source) for t in reason.terms)
+                put(reason.reason)
+                if rows:
+                    put(
+                        table_html(
+                            figure.name, ("term", "value", "unit", "source"), rows, numeric=9
+                        )
+                    )
+
+
+def _inputs_used(found: Answer) -> None:
+    if found.heats is None:
+        return
+    opened = st.expander("Inputs used", key="inputs_used", on_change="rerun")
+    if opened.open:
+        with opened:
+            table = tables.inputs_table(found.heats)
+            rows = [
+                (row.field, f"{row.value:.6g}" if isinstance(row.value, float) else row.value,
+                 row.unit, row.description)
+                for row in rows_of(table)
+            ]  # fmt: skip
+            put(
+                table_html("inputs used", ("field", "value", "unit", "what it is"), rows, numeric=9)
+            )

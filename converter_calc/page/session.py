@@ -1,0 +1,159 @@
+"""What one session keeps: the form, the solved heat, notes. Nothing is shared between sessions."""
+
+from __future__ import annotations
+
+import copy
+import json
+import logging
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, field
+from functools import cache
+from typing import Any
+
+import streamlit as st
+
+from converter_calc.balance.heats import HeatTable, heats_from_dict
+from converter_calc.basis.errors import (
+    ConvergenceError,
+    ConverterError,
+    Fault,
+    InfeasibleError,
+    InputError,
+)
+from converter_calc.data.tables import read_toml
+from converter_calc.page.address import VIEW, address_of, form_from, too_long
+from converter_calc.page.form import Form, document_of, form_of
+from converter_calc.page.markup import fault_texts, note, put
+from converter_calc.planning.outcome import Outcome
+
+LOG = logging.getLogger(__name__)
+
+
+@dataclass
+class Answer:
+    """What the fields give: a document and an outcome, or why there is none.
+
+    infeasible : the error of a valid heat that has no answer. heats : the heat as a table of
+    one, where the input is right.
+    """
+
+    document: dict[str, Any] | None = None
+    heats: HeatTable | None = None
+    outcome: Outcome | None = None
+    faults: list[Fault] = field(default_factory=list)
+    infeasible: InfeasibleError | None = None
+
+
+@cache
+def _start_document() -> dict[str, Any]:
+    return dict(read_toml("start_heat.toml"))
+
+
+def start_form() -> Form:
+    """The form that the page starts with; a fresh copy."""
+    return form_of(copy.deepcopy(_start_document()))
+
+
+def form() -> Form:
+    """The form of this session; read from the address at first."""
+    if "cc_form" not in st.session_state:
+        st.session_state["cc_start"] = start_form()
+        taken, faults = form_from(_params(), start_form())
+        st.session_state["cc_form"] = taken
+        st.session_state["cc_link_faults"] = faults
+        st.session_state["cc_generation"] = 0
+    found: Form = st.session_state["cc_form"]
+    return found
+
+
+def replace_form(new: Form) -> None:
+    """Put another heat into the fields; they are built anew."""
+    st.session_state["cc_form"] = new
+    st.session_state["cc_generation"] += 1
+
+
+def key_of(name: str) -> str:
+    """Key of the widget of a field; another one after a heat was loaded."""
+    return f"field_{st.session_state['cc_generation']}_{name}"
+
+
+def link_faults() -> list[Fault]:
+    """Parameters of the address that were not taken."""
+    found: list[Fault] = st.session_state.get("cc_link_faults", [])
+    return found
+
+
+def _params() -> dict[str, str]:
+    return {key: st.query_params[key] for key in st.query_params}
+
+
+def write_address() -> None:
+    """Bring the address in line with the form; ask for a file where it would be too long."""
+    found = address_of(form(), st.session_state["cc_start"])
+    st.session_state["cc_address_too_long"] = too_long(found)
+    if too_long(found):
+        found = {}
+    view = st.query_params.get(VIEW)
+    if view is not None:
+        found[VIEW] = view
+    if found != _params():
+        st.query_params.from_dict(found)
+
+
+def answer() -> Answer:
+    """The answer for the form as it stands; solved once for each state of the fields."""
+    try:
+        document = document_of(form())
+    except InputError as error:
+        return Answer(faults=error.faults)
+    key = form().question + json.dumps(document, sort_keys=True, default=str)
+    kept = st.session_state.get("cc_answer")
+    if kept is None or kept[0] != key:
+        kept = key, solve(document, predict=form().question == "predict")
+        st.session_state["cc_answer"] = kept
+    found: Answer = kept[1]
+    return found
+
+
+def solve(document: Mapping[str, Any], *, predict: bool) -> Answer:
+    """Plan or predict one document; errors of ours become part of the answer."""
+    from converter_calc.planning import plan as planning
+
+    found = Answer(document=dict(document))
+    try:
+        found.heats = heats_from_dict(document)
+        found.outcome = (planning.predict if predict else planning.plan)(found.heats)
+    except InputError as error:
+        found.faults = error.faults
+    except InfeasibleError as error:
+        found.infeasible = error
+    except ConvergenceError as error:
+        found.infeasible = InfeasibleError(str(error))
+    except ConverterError as error:
+        found.faults = [Fault("heat", str(error))]
+    return found
+
+
+def theme() -> str:
+    """The theme that the browser shows, "light" or "dark"."""
+    kind = st.context.theme.type
+    return "dark" if kind == "dark" else "light"
+
+
+def guarded(view: Callable[[], None]) -> None:
+    """Show a view; an error of ours names its fields, any other is logged and owned up to."""
+    try:
+        view()
+    except InputError as error:
+        put(note("fault", "This cannot be shown:", fault_texts(error.faults)))
+    except ConverterError as error:
+        put(note("fault", str(error)))
+    except Exception:
+        LOG.exception("a view failed")
+        put(
+            note(
+                "fault",
+                "This part of the page failed. Your entries are kept; change one, or save the "
+                "heat under Files and report it.",
+            )
+        )

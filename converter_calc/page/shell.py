@@ -1,0 +1,64 @@
+"""The frame of the page: title, views, and what the address could not give."""
+
+from __future__ import annotations
+
+import streamlit as st
+
+from converter_calc.page import session
+from converter_calc.page.address import VIEW
+from converter_calc.page.balance_view import balance_view
+from converter_calc.page.files_view import files_view
+from converter_calc.page.lime_view import lime_view
+from converter_calc.page.markup import fault_texts, note, put, put_style
+from converter_calc.page.plan_view import plan_view
+from converter_calc.page.scrap_view import scrap_view
+from converter_calc.reporting.html_sheet import element
+
+#: Name in the address -> name on the tab, and what draws it.
+VIEWS = {
+    "plan": ("Plan a heat", plan_view),
+    "balance": ("Heat balance", balance_view),
+    "scrap": ("Scrap ratio", scrap_view),
+    "lime": ("Lime and phosphorus", lime_view),
+    "files": ("Files", files_view),
+}
+
+
+def show_page() -> None:
+    """The whole page, once a run of the session."""
+    st.set_page_config(page_title="Converter charge", page_icon="🔥", layout="wide",
+                       initial_sidebar_state="collapsed")  # fmt: skip
+    put_style()
+    session.form()
+    session.guarded(_title)
+    names = {label: key for key, (label, _) in VIEWS.items()}
+    key = "cc_view"
+    if key not in st.session_state:
+        asked = st.query_params.get(VIEW, "plan")
+        st.session_state[key] = VIEWS.get(asked, VIEWS["plan"])[0]
+    tabs = st.tabs(list(names), key=key, on_change=_remember_view)
+    for tab, (_, view) in zip(tabs, VIEWS.values(), strict=True):
+        if tab.open:
+            with tab:
+                session.guarded(view)
+
+
+def _remember_view() -> None:
+    label = st.session_state["cc_view"]
+    st.query_params[VIEW] = next(key for key, (name, _) in VIEWS.items() if name == label)
+
+
+def _title() -> None:
+    f = session.form()
+    heat = f.fields.get("heat_id", "")
+    put(
+        element("h1", f"Converter charge: heat {heat}" if heat else "Converter charge"),
+        element("p", f.fields.get("name", ""), class_="cc-small"),
+    )
+    faults = session.link_faults()
+    asked = st.query_params.get(VIEW)
+    lines = fault_texts(faults)
+    if asked is not None and asked not in VIEWS:
+        lines.append(f"{VIEW}: must be one of {', '.join(VIEWS)}")
+    if lines:
+        put(note("fault", "Not taken from the address; the starting values stand instead:", lines))
