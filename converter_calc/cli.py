@@ -158,3 +158,13 @@ def laws() -> None:
     from converter_calc.reporting.text_tables import law_text
 
     click.echo(law_text(), nl=False)
+
+
+@main.command()
+@click.option("--port", type=click.IntRange(1, 65535), default=8501, show_default=True)
+@_guarded
+def page(port: int) -> None:
+    """Open the page in a browser at 127.0.0.1; stop it with Ctrl-C."""
+    from converter_calc.page.launch import launch
+
+    launch(port)

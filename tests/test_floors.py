@@ -16,9 +16,10 @@ FLOORS = {
     "balance": 3,
     "planning": 4,
     "reporting": 5,
-    "cli": 6,
-    "__main__": 7,
-    "__init__": 7,
+    "page": 6,
+    "cli": 7,
+    "__main__": 8,
+    "__init__": 8,
 }
 MODULES = sorted(PACKAGE.rglob("*.py"))
 

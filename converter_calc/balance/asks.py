@@ -22,7 +22,7 @@ from converter_calc.basis.units import ZERO_C_K
 class Ask:
     """Unknowns, each beside the residual it is paired with in the elimination.
 
-    end : what the oxygen balance gives ("oxygen_Nm3" or "ln_C"). heat : what the energy
+    end : what the oxygen balance gives ("oxygen_Nm3" or "root_C"). heat : what the energy
     balance gives ("T_K", "scrap_kg", "trim_kg" or "heat_loss_J"). lime, flux, hot_metal :
     whether these are free; lime_rule : the condition that lime answers to.
     """
@@ -91,7 +91,7 @@ def first_guess(p: Problem, ask: Ask) -> Unknowns:
         "lime_kg": 0.01 * hot_metal + 5.0 * silicon,
         "flux_kg": 0.012 * hot_metal,
         "oxygen_Nm3": 0.052 * hot_metal,
-        "ln_C": np.full(n, np.log(0.06)),
+        "root_C": np.full(n, 0.06**-0.5),
         "T_K": np.full(n, 1650.0 + ZERO_C_K),
         "scrap_kg": scrap,
         "trim_kg": 0.002 * hot_metal,
@@ -112,7 +112,7 @@ REACH = {
     "f_Mn": Reach(low=0.0, high=1.0),
     "f_P": Reach(low=0.0, high=1.0),
     "oxygen_Nm3": Reach(share=0.8, low=0.0),
-    "ln_C": Reach(step=1.5, low=float(np.log(1e-5)), high=float(np.log(6.0))),
+    "root_C": Reach(share=0.6, low=0.38, high=400.0),
     "T_K": Reach(step=250.0, low=1200.0, high=2900.0),
     "hot_metal_kg": Reach(share=0.6, low=0.0),
 }

@@ -4,10 +4,11 @@
 else in closed form: totals charged, slag, metal, gas, dust, enthalpies, and the residuals
 that are zero at the answer. Which quantities are unknown is not its business.
 
-Unknowns (any of them may be a given instead): T_K, ln_C, slag_kg (liquid slag), metal_kg
-(steel + droplets + ejections), f_Mn and f_P (share of the element in the slag), oxygen_Nm3,
-hot_metal_kg, scrap_kg, lime_kg, flux_kg, trim_kg (coolant if positive, fuel if negative),
-heat_loss_J.
+Unknowns (any of them may be a given instead): T_K, root_C (end carbon [mass %] to the power
+-1/2, in which the oxygen bound as iron oxide is nearly straight), slag_kg (liquid slag),
+metal_kg (steel + droplets + ejections), f_Mn and f_P (share of the element in the slag),
+oxygen_Nm3, hot_metal_kg, scrap_kg, lime_kg, flux_kg, trim_kg (coolant if positive, fuel if
+negative), heat_loss_J.
 """
 
 from __future__ import annotations
@@ -38,7 +39,7 @@ def evaluate(p: Problem, x: Mapping[str, Num]) -> State:
     """
     s = State()
     s.T_K = x["T_K"] if "T_K" in x else p.values["aim_temp_C"] + ZERO_C_K
-    s.C_pct = ad.exp(x["ln_C"]) if "ln_C" in x else p.values["aim_C_pct"]
+    s.C_pct = 1.0 / ad.square(x["root_C"]) if "root_C" in x else p.values["aim_C_pct"]
     s.slag_kg, s.metal_kg = x["slag_kg"], x["metal_kg"]
     _metal_lots(p, s)
     add_charge(p, x, s)

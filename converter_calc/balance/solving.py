@@ -24,14 +24,14 @@ from converter_calc.basis.tolerances import (
     FITTED_FROM,
     FOLLOWED_STEPS,
     MOST_STEPS,
+    POLISHED,
     QUICK_STEPS,
-    RESIDUAL,
     SAMPLE,
     SAMPLED_FROM,
 )
 
 #: Size of the unknowns that do not grow with the heat; the others are measured by its mass.
-INTENSIVE = {"f_Mn": 1.0, "f_P": 1.0, "ln_C": 1.0, "T_K": 1000.0}
+INTENSIVE = {"f_Mn": 1.0, "f_P": 1.0, "root_C": 5.0, "T_K": 1000.0}
 #: Size of the others, per kg of the scale of the heat (1 where not named).
 EXTENSIVE = {
     "oxygen_Nm3": 0.05,
@@ -69,7 +69,7 @@ def solve_ask(p: Problem, ask: Ask, memory: Memory | None = None) -> Solved:
             for name in guess:
                 solved.unknowns[name][rows] = x[name]
             solved.residual[rows] = residual
-        solved.converged = solved.residual <= RESIDUAL
+        solved.converged = solved.residual <= POLISHED
     # what stands badly starts again as it would alone, so that company makes no difference
     for steps, afresh in ((QUICK_STEPS, False), (MOST_STEPS, True)):
         left = np.flatnonzero(~solved.converged)
@@ -134,13 +134,16 @@ def _inputs(p: Problem) -> Array | None:
 class Fit:
     """Answers of a sample, and their inverse Jacobians, as linear functions of the inputs.
 
-    mean, deviation : of the inputs (d,). coefficients : first of the k answers, then of the
-    entries of the inverse Jacobian (k + k * k, 1 + d).
+    mean, deviation : of the inputs (d,). first : coefficients of linear fits of the k answers
+    (k, 1 + d), scaled to mean 0 and deviation 1. coefficients : of the answers and then of the
+    entries of the inverse Jacobian (k + k * k, m), in the inputs and in the products of two of
+    those first answers, which carry most of the curvature.
     """
 
     names: tuple[str, ...]
     mean: Array
     deviation: Array
+    first: Array
     coefficients: Array
 
     def predict(self, p: Problem) -> tuple[Unknowns, dict[str, Any], list[list[Any]]]:
@@ -149,7 +152,8 @@ class Fit:
         inputs = _inputs(p)
         if inputs is None:
             inputs = np.broadcast_to(self.mean[:, None], (self.mean.size, p.n))
-        found = self.coefficients @ _terms(inputs, self.mean, self.deviation)
+        linear = _terms(inputs, self.mean, self.deviation)
+        found = self.coefficients @ _with_products(linear, self.first)
         unit = units_of(p, self.names)
         x = {name: found[k] * unit[name] for k, name in enumerate(self.names)}
         inverse = [[found[count * (1 + u) + r] for r in range(count)] for u in range(count)]
@@ -164,6 +168,12 @@ def _terms(inputs: Array, mean: Array, deviation: Array) -> Array:
     """One, and each input in standard deviations from its mean (1 + d, n)."""
     z = (inputs - mean[:, None]) / deviation[:, None]
     return np.concatenate([np.ones((1, inputs.shape[1])), np.clip(z, -OUTLIER, OUTLIER)])
+
+
+def _with_products(linear: Array, first: Array) -> Array:
+    """The linear terms, and below them all products of two first answers (m, n)."""
+    y = first @ linear
+    return np.concatenate([linear, *(y[k] * y[k:] for k in range(len(y)))])
 
 
 @dataclass
@@ -186,7 +196,7 @@ def _sample(system: System, guess: Unknowns) -> Fit | None:
     size = max(SAMPLE, 6 * (1 + inputs.shape[0]))
     rows = np.unique(np.linspace(0, p.n - 1, min(size, p.n // 4)).astype(int))
     begin = {name: x[rows] for name, x in guess.items()}
-    solved = solve(system, begin, REACH, rows, QUICK_STEPS * 2)
+    solved = solve(system, begin, REACH, rows, QUICK_STEPS)
     good = np.flatnonzero(solved.converged)
     if good.size < max(16, rows.size // 2):
         return None
@@ -197,9 +207,14 @@ def _sample(system: System, guess: Unknowns) -> Fit | None:
     deviation[deviation == 0.0] = 1.0
     answers = np.stack([values / unit[name] for name, values in x.items()], axis=1)
     inverses = _inverse_jacobians(system, rows, x, unit).reshape(good.size, -1)
-    terms = _terms(inputs[:, rows], mean, deviation).T
-    coefficients = np.linalg.lstsq(terms, np.hstack([answers, inverses]), rcond=1e-10)[0]
-    return Fit(tuple(x), mean, deviation, np.ascontiguousarray(coefficients.T))
+    linear = _terms(inputs[:, rows], mean, deviation)
+    first = np.linalg.lstsq(linear.T, answers, rcond=1e-10)[0].T
+    y = first @ linear
+    first[:, 0] -= y.mean(axis=1)
+    first /= y.std(axis=1)[:, None] + 1e-12
+    terms = _with_products(linear, first).T
+    found = np.linalg.lstsq(terms, np.hstack([answers, inverses]), rcond=1e-10)[0]
+    return Fit(tuple(x), mean, deviation, first, np.ascontiguousarray(found.T))
 
 
 def _inverse_jacobians(system: System, rows: Array, x: Unknowns, unit: dict[str, Any]) -> Array:

@@ -7,6 +7,9 @@ from __future__ import annotations
 RESIDUAL = 1e-12
 #: A heat that stalls above RESIDUAL through rounding still counts as solved below this.
 RESIDUAL_STALLED = 1e-10
+#: Residual from which one more quasi-Newton step is sure to end below RESIDUAL: the steps gain
+#: a factor of 100 there.
+POLISHED = 3e-11
 #: Promised closure of each element and of energy, relative.
 CLOSURE = 1e-9
 #: Newton steps before a heat is given up. Ordinary heats need 5 to 8.
@@ -15,7 +18,7 @@ MOST_STEPS = 60
 QUICK_STEPS = 4
 #: Rows from which a table is solved from a sample of its own heats, and the least sample.
 SAMPLED_FROM = 3000
-SAMPLE = 120
+SAMPLE = 240
 #: Rows from which residuals are recorded and replayed: recording costs about as much as
 #: working out the residuals of 10,000 heats.
 RECORDED_FROM = 2000

@@ -76,31 +76,34 @@ def _take(form: Form, name: str, text: str) -> str | None:
             return f"must be one of {', '.join(QUESTIONS)}"
         form.question = text
         return None
-    scraps = form.materials("scrap")
-    if name == ORDER:
-        names = [part for part in text.split(",") if part]
-        strange = [part for part in names if part not in scraps]
-        if strange:
-            return f"{strange[0][:40]!r} is no scrap of the shop"
-        form.order = names
-        return None
-    if name == MIX:
-        return _take_mix(form, text, scraps)
-    reason = known_field(name, form)
-    if reason:
-        return reason
-    row = row_of(name)
-    if text.strip() and row.kind == "number":
-        reason = field_fault(name, text)
-    elif text.strip():
-        trial = form.copy()
-        trial.fields = {name: text}
-        found: list[Fault] = []
-        check_document(document_of(trial), found)
-        reason = next((fault.message for fault in found if fault.field == row.place), None)
+    if name in (ORDER, MIX):
+        take = _take_order if name == ORDER else _take_mix
+        return take(form, text, form.materials("scrap"))
+    reason = known_field(name, form) or (_field_reason(form, name, text) if text.strip() else None)
     if reason is None:
         form.fields[name] = text
     return reason
+
+
+def _field_reason(form: Form, name: str, text: str) -> str | None:
+    """What the planner would have against a filled field, or None."""
+    row = row_of(name)
+    if row.kind == "number":
+        return field_fault(name, text)
+    trial = form.copy()
+    trial.fields = {name: text}
+    found: list[Fault] = []
+    check_document(document_of(trial), found)
+    return next((fault.message for fault in found if fault.field == row.place), None)
+
+
+def _take_order(form: Form, text: str, scraps: list[str]) -> str | None:
+    names = [part for part in text.split(",") if part]
+    strange = [part for part in names if part not in scraps]
+    if strange:
+        return f"{strange[0][:40]!r} is no scrap of the shop"
+    form.order = names
+    return None
 
 
 def _take_mix(form: Form, text: str, scraps: list[str]) -> str | None:

@@ -4,11 +4,12 @@ from __future__ import annotations
 
 import datetime as dt
 from collections.abc import Callable
+from functools import partial
 from typing import TYPE_CHECKING, Any
 
 import streamlit as st
 
-from converter_calc.basis.errors import ConverterError, InputError
+from converter_calc.basis.errors import ConverterError, Fault, InputError
 from converter_calc.page.documents import (
     form_with_heat,
     form_with_shop,
@@ -20,9 +21,11 @@ from converter_calc.page.form import Form, document_of, shop_part
 from converter_calc.page.markup import fault_texts, heading, note, put
 from converter_calc.page.session import answer, form, guarded, replace_form, write_address
 from converter_calc.page.toml_text import toml_text
-from converter_calc.reporting.exports import csv_text, heat_json, heat_sheets, heat_xlsx, json_text
+from converter_calc.planning.outcome import Outcome
+from converter_calc.reporting.exports import csv_text, heat_json, heat_xlsx, json_text
 from converter_calc.reporting.exports import xlsx_bytes as sheets_xlsx
 from converter_calc.reporting.html_sheet import PAPERS, html_sheet
+from converter_calc.reporting.tables import recipe_table
 from converter_calc.reporting.uploads import parse_table
 
 if TYPE_CHECKING:
@@ -112,16 +115,17 @@ def _results() -> None:
                      format_func=lambda name: papers.get(name, name))  # fmt: skip
     today = dt.datetime.now(tz=dt.UTC).astimezone().date()
     # what runs after the click has no session: everything it needs is bound here
+    sheet = partial(html_sheet, outcome, date=today, paper=paper)
     with st.container(horizontal=True):
-        _download("Charge sheet to print (HTML)",
-                  lambda o=outcome, p=paper, d=today: html_sheet(o, date=d, paper=p),
-                  "charge_sheet.html", "text/html")  # fmt: skip
-        _download("Workbook (XLSX)", lambda o=outcome: heat_xlsx(o), "heat.xlsx", XLSX)
-        _download("Recipe (CSV)", lambda o=outcome: csv_text(heat_sheets(o)["recipe"]),
-                  "recipe.csv", "text/csv")  # fmt: skip
-        _download("Everything (JSON)", lambda o=outcome: heat_json(o), "heat.json",
-                  "application/json")  # fmt: skip
+        _download("Charge sheet to print (HTML)", sheet, "charge_sheet.html", "text/html")
+        _download("Workbook (XLSX)", partial(heat_xlsx, outcome), "heat.xlsx", XLSX)
+        _download("Recipe (CSV)", partial(_recipe_csv, outcome), "recipe.csv", "text/csv")
+        _download("Everything (JSON)", partial(heat_json, outcome), "heat.json", "application/json")
     put("The sheet opens in a browser without a network; print it from there.")
+
+
+def _recipe_csv(outcome: Outcome) -> str:
+    return csv_text(recipe_table(outcome))
 
 
 def _download(label: str, data: str | Callable[[], Any], name: str, mime: str) -> None:
@@ -143,13 +147,16 @@ def _table() -> None:
     file = st.file_uploader("Table (CSV or XLSX)", ["csv", "xlsx"], key="upload_table",
                             max_upload_size=5)  # fmt: skip
     pasted = st.text_area("or paste it here, with its heading", key="paste_table", height=120)
-    what = st.radio("Each heat is", ["planned", "predicted"], horizontal=True, key="table_what",
-                    captions=["what is missing is solved for", "the charge is complete"])  # fmt: skip
+    what = st.radio(
+        "Each heat is", ["planned", "predicted"], horizontal=True, key="table_what",
+        captions=["what is missing is solved for", "the charge is complete"],
+    )  # fmt: skip
     asked = st.button("Work out all heats", key="solve_table")
     if asked:
         st.session_state.pop("cc_table", None)
         try:
-            st.session_state["cc_table"] = _solved_table(file, pasted, form(), what == "predicted")
+            predict = what == "predicted"
+            st.session_state["cc_table"] = _solved_table(file, pasted, form(), predict=predict)
         except InputError as error:
             put(note("fault", "The table was not worked out:",
                      _shortened(fault_texts(error.faults))))  # fmt: skip
@@ -159,16 +166,19 @@ def _table() -> None:
         _show_table(*st.session_state["cc_table"])
 
 
-def _solved_table(file: Any, pasted: str, now: Form, predict: bool) -> tuple[pd.DataFrame, str]:  # noqa: FBT001
+def _solved_table(file: Any, pasted: str, now: Form, *, predict: bool) -> tuple[Any, str]:
+    """Results of the table, and how it was read. Raises InputError with every fault."""
     if file is None and not pasted.strip():
-        from converter_calc.basis.errors import Fault
-
         raise InputError([Fault("table", "upload a file or paste a table first")])
     name = "pasted table" if file is None else file.name
-    content = pasted.encode() if file is None else file.getvalue()
+    content = pasted.encode("utf-8", "replace") if file is None else file.getvalue()
     frame = parse_table(content, name)
     bar = st.progress(0.0, "The heats are worked out")
-    found = solve_frame(frame, table_defaults(now), bar.progress, predict=predict)
+
+    def advance(share: float) -> None:
+        bar.progress(share, "The heats are worked out")
+
+    found = solve_frame(frame, table_defaults(now), advance, predict=predict)
     bar.empty()
     return found, str(frame.attrs.get("read_as", ""))
 
@@ -183,6 +193,6 @@ def _show_table(found: pd.DataFrame, read_as: str) -> None:
     shown = found[order]
     st.dataframe(shown, hide_index=True, alt=f"Results of {len(found)} heats, one a row")
     with st.container(horizontal=True):
-        _download("Results (CSV)", lambda t=shown: csv_text(t), "heats.csv", "text/csv")
-        _download("Results (XLSX)", lambda t=shown: sheets_xlsx({"heats": t}), "heats.xlsx", XLSX)
-        _download("Results (JSON)", lambda t=shown: json_text(t), "heats.json", "application/json")
+        _download("Results (CSV)", partial(csv_text, shown), "heats.csv", "text/csv")
+        _download("Results (XLSX)", partial(sheets_xlsx, {"heats": shown}), "heats.xlsx", XLSX)
+        _download("Results (JSON)", partial(json_text, shown), "heats.json", "application/json")

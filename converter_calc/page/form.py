@@ -127,27 +127,11 @@ def document_of(form: Form) -> dict[str, Any]:
     """
     document: dict[str, Any] = {}
     faults: list[Fault] = []
-    left_out = set(LEFT_OUT[form.question])
-    if form.question == "trim" and form.fields.get("hot_metal_kg"):
-        left_out.add("aim_steel_kg")
-    known = form.materials()
-    for name, text in form.fields.items():
-        if not text.strip() or name in left_out or name == "ask":
-            continue
-        row = row_of(name)
-        if name not in parameters() and not is_element_column(name):
-            if name.removesuffix("_kg") not in known:
-                continue  # of a material that went with an earlier shop
-        value: Any = text.strip()
-        if row.kind == "number":
-            fault = field_fault(name, text)
-            if fault:
-                faults.append(Fault(row.place, fault))
-                continue
-            value = parse_number(text)
-        if row.section:
+    for name in _fields_in_use(form):
+        row, value = row_of(name), _value(name, form.fields[name], faults)
+        if value is not None and row.section:
             document.setdefault(row.section, {})[row.key] = value
-        else:
+        elif value is not None:
             document[row.key] = value
     choice = document.setdefault("choice", {})
     if form.question != "predict":
@@ -161,6 +145,32 @@ def document_of(form: Form) -> dict[str, Any]:
     if faults:
         raise InputError(faults)
     return document
+
+
+def _fields_in_use(form: Form) -> list[str]:
+    """Filled fields that the question uses; masses of materials that are gone are left out."""
+    left_out = LEFT_OUT[form.question] | {"ask"}
+    if form.question == "trim" and form.fields.get("hot_metal_kg"):
+        left_out = left_out | {"aim_steel_kg"}
+    known = {f"{name}_kg" for name in form.materials()}
+    return [
+        name
+        for name, text in form.fields.items()
+        if text.strip()
+        and name not in left_out
+        and (name in parameters() or is_element_column(name) or name in known)
+    ]
+
+
+def _value(name: str, text: str, faults: list[Fault]) -> Any:
+    """A field as number or text; None, and a fault more, where it is wrong."""
+    if row_of(name).kind != "number":
+        return text.strip()
+    fault = field_fault(name, text)
+    if fault is None:
+        return parse_number(text)
+    faults.append(Fault(row_of(name).place, fault))
+    return None
 
 
 def _put_scraps(form: Form, choice: dict[str, Any], faults: list[Fault]) -> None:

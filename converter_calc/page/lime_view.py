@@ -63,12 +63,12 @@ def _lime() -> None:
     put(heading("End phosphorus against lime"))
     show_figure(lime_figure(curve, lines, theme()), "lime_curve", lime_text(curve, lines))
     _carry_back(lines)
-    rows = [
+    marks = [
         (row.line, "–" if np.isnan(row.lime_kg) else f"{row.lime_kg:,.0f}")
         for row in rows_of(lime_lines_table(lines))
     ]
     put(heading("Lines on the lime axis"))
-    put(table_html("lines", ("line", "lime, kg"), rows))
+    put(table_html("lines", ("line", "lime, kg"), marks))
     _band(curve)
     put(heading("What else moves phosphorus"))
     put("Lime holds the basicity of the plan while one thing changes; the law is the chosen one.")
@@ -88,8 +88,8 @@ def _range(low: float, high: float) -> tuple[float, float]:
     """The range of lime: about the plan's at first, then as typed [kg]."""
     ends, faults = [], []
     with st.container(horizontal=True):
-        for label, usual in (("Lime from, kg", low), ("Lime to, kg", high)):
-            usual = round(usual, -2)
+        for label, about in (("Lime from, kg", low), ("Lime to, kg", high)):
+            usual = round(about, -2)
             text = st.text_input(label, key=f"lime_{label}", placeholder=f"{usual:g}", width=150)
             x = usual
             if text:

@@ -52,7 +52,8 @@ def table_html(
 ) -> Markup:
     """A table: the first cell of a row names it, cells from place `numeric` on are numbers.
 
-    name : for those who cannot see the heading above it. parts : numbers of the rows that are a part of the row above.
+    name : for those who cannot see the heading above. parts : numbers of the rows that are a
+    part of the row above.
     """
     inset = set(parts)
     head = [

@@ -46,7 +46,7 @@ def answer_html(found: Answer) -> Markup:
     warnings = outcome.warnings(0)
     return joined(
         [
-            heading("Recipe"),
+            heading(f"Recipe of heat {outcome.heats.ids[0]}"),
             recipe_html(outcome),
             _warned(warnings, "charge"),
             element(
@@ -133,7 +133,7 @@ def end_point_html(outcome: Outcome) -> Markup:
 
 
 def _verdict(name: str, value: float, aim: float, unit: str) -> str:
-    """Against the aim in one word; phosphorus, sulphur and manganese are at most, CaO/SiO₂ at least."""
+    """Against the aim in one word; P, S and Mn are at most, CaO/SiO₂ is at least."""
     if not np.isfinite(aim):
         return ""
     near = SHOWN.get(unit, 0.0)

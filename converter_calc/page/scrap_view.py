@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+from functools import partial
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -59,6 +61,7 @@ def _scrap() -> None:
         quantity = st.selectbox("Shown", QUANTITIES, key="scrap_quantity", width=300,
                                 format_func=lambda name: _title(columns, name))  # fmt: skip
         silicon = st.selectbox("Silicon of the hot metal, %", axes["hm_Si_pct"],
+            index=1,
                                key="scrap_silicon", width=200,
                                format_func=lambda x: f"{x:.2f}")  # fmt: skip
     if not frame[quantity].notna().any():
@@ -94,15 +97,15 @@ def _axes(found: Answer) -> dict[str, list[float]]:
             ends = []
             for end, x in (("from", middle[name] - span), ("to", middle[name] + span)):
                 usual = min(max(round(x / step[name]) * step[name], row.low), row.high)
-                text = st.text_input(f"{label_of(name)} {end}", key=f"scrap_{name}_{end}",
+                text = st.text_input(_end_label(name, end), key=f"scrap_{name}_{end}",
                                      placeholder=f"{usual:g}", width=150)  # fmt: skip
                 if text and field_fault(name, text):
-                    faults.append(Fault(f"{label_of(name)} {end}", str(field_fault(name, text))))
+                    faults.append(Fault(_end_label(name, end), str(field_fault(name, text))))
                     text = ""
                 ends.append(parse_number(text) if text else usual)
             if ends[1] <= ends[0]:
                 faults.append(Fault(label_of(name), f"must rise, given {ends[0]:g} to {ends[1]:g}"))
-            axes[name] = np.linspace(*ends, sizes[name]).tolist()
+            axes[name] = np.linspace(ends[0], ends[1], sizes[name]).tolist()
     if faults:
         raise InputError(faults)
     if middle["hm_Si_pct"] not in axes["hm_Si_pct"]:  # the map of today's silicon is always there
@@ -111,13 +114,21 @@ def _axes(found: Answer) -> dict[str, list[float]]:
     return axes
 
 
+def _end_label(name: str, end: str) -> str:
+    """Label of one end of an axis."""
+    what = {"hot_metal_temp_C": "Hot metal, °C", "hm_Si_pct": "Silicon, %"}
+    return f"{what.get(name) or label_of(name)}, {end}"
+
+
 def _map(heats: HeatTable, axes: dict[str, list[float]]) -> pd.DataFrame:
     """The map, worked out once for each heat and axes; kept in the session only."""
     key = (id(heats), repr(axes))
     kept = st.session_state.get("cc_scrap_map")
     if kept is None or kept[0] != key:
         with st.spinner("The map is worked out"):
-            frame = scrap_ratio_map(heats, axes["scrap_share_pct"], axes["hot_metal_temp_C"],
+            # the map gives the scrap share itself, whatever the heat asks for
+            free = replace(heats, choices=replace(heats.choices, ask=None))
+            frame = scrap_ratio_map(free, axes["scrap_share_pct"], axes["hot_metal_temp_C"],
                                     axes["hm_Si_pct"])  # fmt: skip
         kept = key, frame, heats
         st.session_state["cc_scrap_map"] = kept
@@ -141,7 +152,7 @@ def _downloads(frame: pd.DataFrame) -> None:
         st.download_button("Map as CSV", csv_text(frame), "scrap_ratio.csv", "text/csv",
                            key="scrap_csv", on_click="ignore")  # fmt: skip
         st.download_button(
-            "Map as XLSX", lambda frame=frame: xlsx_bytes({"scrap ratio": frame}),
+            "Map as XLSX", partial(xlsx_bytes, {"scrap ratio": frame}),
             "scrap_ratio.xlsx", key="scrap_xlsx", on_click="ignore",
             mime="application/vnd.openxmlformats-officedocument.spreadsheetml.sheet",
         )  # fmt: skip

@@ -29,8 +29,12 @@ def show_page() -> None:
     st.set_page_config(page_title="Converter charge", page_icon="🔥", layout="wide",
                        initial_sidebar_state="collapsed")  # fmt: skip
     put_style()
+    session.guarded(_page)
+
+
+def _page() -> None:
     session.form()
-    session.guarded(_title)
+    _title()
     names = {label: key for key, (label, _) in VIEWS.items()}
     key = "cc_view"
     if key not in st.session_state:
@@ -49,15 +53,9 @@ def _remember_view() -> None:
 
 
 def _title() -> None:
-    f = session.form()
-    heat = f.fields.get("heat_id", "")
-    put(
-        element("h1", f"Converter charge: heat {heat}" if heat else "Converter charge"),
-        element("p", f.fields.get("name", ""), class_="cc-small"),
-    )
-    faults = session.link_faults()
+    put(element("h1", "Converter charge"))
     asked = st.query_params.get(VIEW)
-    lines = fault_texts(faults)
+    lines = fault_texts(session.link_faults())
     if asked is not None and asked not in VIEWS:
         lines.append(f"{VIEW}: must be one of {', '.join(VIEWS)}")
     if lines:

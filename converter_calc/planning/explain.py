@@ -244,7 +244,7 @@ def _carbon(outcome: Outcome, i: int) -> Explanation:
         Term("carbon to CO2", float(at(s.gas_kg["CO2"], i)) * _share("CO2", "C"), "kg"),
         Term("carbon left in the metal", float(at(s.metal_species_kg["C"], i)), "kg"),
     ]
-    given = outcome.ask.end != "ln_C"
+    given = outcome.ask.end != "root_C"
     reason = "End carbon is the aim:" if given else "End carbon follows from the oxygen blown:"
     return Explanation("end carbon", float(at(s.C_pct, i)), "%", reason, lines)
 

@@ -128,7 +128,7 @@ def sensitivities(outcome: Outcome) -> dict[str, list[Sensitivity]]:
     else:
         charged = outcome.heats
     heats = with_values(charged, oxygen_Nm3=outcome.state.oxygen_Nm3)
-    ask = Ask(end="ln_C", heat="T_K")
+    ask = Ask(end="root_C", heat="T_K")
     solved = solve_heats(heats, ask)
     found["predict"] = _one(heats, ask, solved.x, aims=False)
     return found

@@ -9,10 +9,12 @@ import numpy as np
 
 from converter_calc.balance.asks import Ask, evaluate_ask
 from converter_calc.balance.heats import HeatTable
+from converter_calc.balance.newton import residual_norm
 from converter_calc.balance.problem import build_problem
 from converter_calc.balance.solving import Memory, solve_ask
 from converter_calc.basis.dual import Array
 from converter_calc.basis.errors import Fault, InputError
+from converter_calc.basis.tolerances import RESIDUAL_STALLED
 from converter_calc.planning.outcome import Outcome
 
 ASKS = ("scrap", "steel", "trim")
@@ -192,7 +194,7 @@ def predict_groups(heats: HeatTable) -> list[tuple[Array, HeatTable, Ask]]:
     for kind in np.unique(key):
         rows = np.flatnonzero(key == kind)
         ask = Ask(
-            end="ln_C" if kind & 1 else "oxygen_Nm3", heat="heat_loss_J" if kind & 2 else "T_K"
+            end="root_C" if kind & 1 else "oxygen_Nm3", heat="heat_loss_J" if kind & 2 else "T_K"
         )
         groups.append((rows, heats.take(rows) if rows.size < heats.n else heats, ask))
     return groups
@@ -217,14 +219,15 @@ def solve_in_parts(
         some = p if whole else p.take(part)
         with np.errstate(all="ignore"):
             state = evaluate_ask(some, ask, dict(x))
+            left = residual_norm([state.residuals[name] for name in ask.residuals], (some.n,))
         yield Outcome(
             heats if whole else heats.take(part),
             ask,
             some,
             x,
             state,
-            solved.converged[part],
-            solved.residual[part],
+            left <= RESIDUAL_STALLED,
+            left,
             solved.steps[part],
         )
 

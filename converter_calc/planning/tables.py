@@ -51,9 +51,12 @@ def solve_table(frame: pd.DataFrame, shop: Any, solve: Solve) -> pd.DataFrame:
     if workers > 1:
         columns = _share_out(frame, shop, solve, workers)
     else:
-        columns = _solve_part(frame, shop, solve)
-    ids = np.array(row_names(frame)[0], dtype=object)
-    return pd.DataFrame({"heat_id": ids, **columns}, index=frame.index, copy=False)
+        columns = {"heat_id": _ids(frame), **_solve_part(frame, shop, solve)}
+    return pd.DataFrame(columns, index=frame.index, copy=False)
+
+
+def _ids(frame: pd.DataFrame) -> Any:
+    return np.array(row_names(frame)[0], dtype=object)
 
 
 def _workers(n: int) -> int:
@@ -97,6 +100,7 @@ def _share_out(frame: pd.DataFrame, shop: Any, solve: Solve, workers: int) -> Co
     for run in runs:
         run.start()
     gc.unfreeze()
+    ids = _ids(frame)
     found = sorted((queue.get() for _ in runs), key=lambda answer: answer[0])
     for run in runs:
         run.join()
@@ -114,7 +118,7 @@ def _share_out(frame: pd.DataFrame, shop: Any, solve: Solve, workers: int) -> Co
         )
     for name in found[0][2]:
         columns[name] = np.concatenate([_unpacked(answer[2][name]) for answer in found])
-    return columns
+    return {"heat_id": ids, **columns}
 
 
 def _packed(texts: Any) -> tuple[list[str], Any]:
