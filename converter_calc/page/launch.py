@@ -16,6 +16,8 @@ SETTINGS = {
     "client.toolbarMode": "minimal",
     "client.showErrorDetails": "type",
     "client.disableDataExport": "true",
+    "theme.light.primaryColor": "#2960c9",
+    "theme.dark.primaryColor": "#5b93f5",
 }
 
 

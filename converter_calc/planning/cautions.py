@@ -2,11 +2,14 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
+
 import numpy as np
 
 from converter_calc.balance.closures import magnesia_aim_pct
 from converter_calc.basis.units import ZERO_C_K
-from converter_calc.laws import magnesia, phosphorus
+from converter_calc.laws import magnesia, manganese, phosphorus, sulphur
+from converter_calc.laws.catalogue import Outside
 from converter_calc.planning.outcome import Caution, Outcome, spread
 
 #: Thresholds of slopping and reversion: common practice, no source.
@@ -164,6 +167,17 @@ def _charge(outcome: Outcome) -> list[Caution]:
             {"kg": hidden},
         )
     )
+    oxygen = outcome.heats.values["oxygen_Nm3"]
+    if outcome.ask.end == "oxygen_Nm3":
+        found.append(
+            Caution(
+                "oxygen-ignored",
+                "charge.oxygen_Nm3",
+                np.isfinite(oxygen),
+                "charge.oxygen_Nm3 = {given:.0f} is not used: the plan solves for the oxygen",
+                {"given": oxygen},
+            )
+        )
     fluorspar = outcome.state.slag_species_kg.get("CaF2", 0.0)
     found.append(
         Caution(
@@ -179,20 +193,27 @@ def _charge(outcome: Outcome) -> list[Caution]:
 
 
 def _law_ranges(outcome: Outcome) -> list[Caution]:
+    """Named laws used outside the range that their source gives, unless pinned away."""
     s, p = outcome.state, outcome.p
-    found: list[Caution] = []
-    if p.mask("pin_L_P") is True or p.mask("pin_end_P_pct") is True:
-        return found
-    law = p.laws["phosphorus"]
     slag = {name: np.asarray(pct) for name, pct in s.slag_pct.items()}
-    for quantity, low, high, outside in phosphorus.out_of_range(law, slag, s.T_K, s.C_pct):
-        found.append(
-            Caution(
-                "law-range",
-                "law.phosphorus",
-                outside,
-                f"the phosphorus law {law} is used outside its range of {quantity} "
-                f"({low:g} to {high:g})",
+    outside: dict[str, tuple[str, Callable[[str], list[Outside]]]] = {
+        "P": ("phosphorus", lambda law: phosphorus.out_of_range(law, slag, s.T_K, s.C_pct)),
+        "Mn": ("manganese", lambda law: manganese.out_of_range(law, slag, s.T_K)),
+        "S": ("sulphur", lambda law: sulphur.out_of_range(law, slag, s.T_K)),
+    }
+    found: list[Caution] = []
+    for element, (topic, ranges) in outside.items():
+        if p.mask(f"pin_L_{element}") is True or p.mask(f"pin_end_{element}_pct") is True:
+            continue
+        law = p.laws[topic]
+        for quantity, low, high, mask in ranges(law):
+            found.append(
+                Caution(
+                    "law-range",
+                    f"law.{topic}",
+                    mask,
+                    f"the {topic} law {law} is used outside its range of {quantity} "
+                    f"({low:g} to {high:g})",
+                )
             )
-        )
     return found

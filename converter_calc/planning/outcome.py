@@ -31,6 +31,15 @@ from converter_calc.basis.dual import Array, Num
 from converter_calc.basis.elements import molar_mass
 from converter_calc.basis.tolerances import CLOSURE
 from converter_calc.basis.units import MJ, NM3_MOL, ZERO_C_K
+from converter_calc.data.tables import read_toml
+from converter_calc.laws import carbon_oxygen, manganese, phosphorus, sulphur
+
+NAMED_LAWS: dict[str, Any] = {
+    "phosphorus": phosphorus,
+    "manganese": manganese,
+    "sulphur": sulphur,
+    "carbon_oxygen": carbon_oxygen,
+}
 
 
 @dataclass
@@ -46,6 +55,24 @@ class Caution:
     def message(self, index: int) -> str:
         """Text for one heat."""
         return self.text.format(**{key: float(at(x, index)) for key, x in self.values.items()})
+
+
+def laws_of(p: Problem) -> dict[str, dict[str, str]]:
+    """Law used for each quantity: name and source."""
+    found = {}
+    for topic, name in p.laws.items():
+        module = NAMED_LAWS.get(topic)
+        if module is None:
+            source = "constant or by iron oxide: common practice; equilibrium: data/minor.toml"
+        else:
+            note = module.describe(name)
+            source = f"{note.source} ({note.known})"
+        found[topic] = {"name": name, "source": source}
+    for topic in ("iron_oxide", "magnesia", "lime"):
+        data = read_toml(topic + ".toml")
+        found[topic] = {"name": topic, "source": f"{data['source']} ({data['known']})"}
+    found["iron_oxide"]["name"] = p.blowing
+    return found
 
 
 def at(x: Num, index: int) -> Any:
@@ -272,7 +299,7 @@ class Outcome:
             "heat_input_MJ": plain(self.heat_input_MJ()),
             "balance": balance,
             "laws": {
-                "chosen": dict(self.p.laws) | {"iron_oxide": self.p.blowing},
+                "chosen": laws_of(self.p),
                 "values": plain(self.state.laws),
             },
             "off_gas_Nm3": plain(self.gas_Nm3()),

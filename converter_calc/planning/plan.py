@@ -74,6 +74,7 @@ def _run(
     if heats.n != 1:
         return outcomes
     raise_unless_solved(outcomes[0])
+    raise_unless_closed(outcomes[0])
     return outcomes[0]
 
 
@@ -129,6 +130,18 @@ def _finish_predict(outcome: Outcome) -> None:
         outcome.status[row] = "not converged"
         outcome.binding[row] = "no end point was found for this charge"
         outcome.frees[row] = ["check oxygen and charge against ordinary practice"]
+
+
+def raise_unless_closed(outcome: Outcome) -> None:
+    """Raise ConvergenceError where an element or the energy of a solved heat does not close."""
+    if outcome.check_closures().all():
+        return
+    gaps = {name: float(np.max(np.abs(c.relative))) for name, c in outcome.closures.items()}
+    worst = max(gaps, key=lambda name: gaps[name])
+    raise ConvergenceError(
+        f"heat {outcome.heats.ids[0]}: the balance of {worst} does not close ({gaps[worst]:.1e}); "
+        "please report this heat"
+    )
 
 
 def raise_unless_solved(outcome: Outcome, index: int = 0) -> None:
