@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterable, Mapping
-from typing import NamedTuple
+from typing import Any, NamedTuple
 
 
 class Fault(NamedTuple):
@@ -33,6 +33,10 @@ class InputError(ConverterError):
         self.faults = list(faults)
         super().__init__("\n".join(fault.line() for fault in self.faults))
 
+    def __reduce__(self) -> tuple[Any, ...]:
+        """Errors cross from process to process."""
+        return type(self), (self.faults,)
+
 
 class DataError(ConverterError):
     """A name that the data tables do not hold, or a table that is broken."""
@@ -56,6 +60,10 @@ class InfeasibleError(ConverterError):
         self.binding = binding
         self.frees = list(frees)
         self.nearest = dict(nearest or {})
+
+    def __reduce__(self) -> tuple[Any, ...]:
+        """Errors cross from process to process."""
+        return type(self), (str(self), self.binding, self.frees, self.nearest)
 
 
 class ConvergenceError(ConverterError):

@@ -9,7 +9,7 @@ RESIDUAL = 1e-12
 RESIDUAL_STALLED = 1e-10
 #: Residual from which one more quasi-Newton step is sure to end below RESIDUAL: the steps gain
 #: a factor of 100 there.
-POLISHED = 3e-11
+POLISHED = 1e-11
 #: Promised closure of each element and of energy, relative.
 CLOSURE = 1e-9
 #: Newton steps before a heat is given up. Ordinary heats need 5 to 8.

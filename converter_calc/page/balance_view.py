@@ -11,6 +11,7 @@ from converter_calc.page.session import answer, guarded, theme
 from converter_calc.planning.outcome import Outcome
 from converter_calc.reporting import charts, tables
 
+GROUPS = ("brought in", "reactions", "carried away", "loss")
 #: No toolbar logo, no sending to a cloud; the picture can be saved.
 CHART = {
     "displaylogo": False,
@@ -53,7 +54,7 @@ def _heat(outcome: Outcome) -> None:
     rows = [
         (f"{row.term}", row.group, f"{row.heat_MJ:,.1f}", f"{row.heat_MJ_per_t:,.2f}",
          f"{row.share_pct:.2f}")
-        for row in rows_of(tables.heat_balance_table(outcome))
+        for row in rows_of(terms)
     ]  # fmt: skip
     put(heading("Heat balance, term by term"))
     headings = ("term", "group", "MJ", "MJ/t steel", "% of heat supplied")

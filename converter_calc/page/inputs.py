@@ -6,7 +6,7 @@ from collections.abc import Iterable
 
 import streamlit as st
 
-from converter_calc.balance.schema import allowed_texts, sections
+from converter_calc.balance.schema import allowed_texts, parameters, sections
 from converter_calc.basis.errors import ConverterError
 from converter_calc.page.form import QUESTIONS, Form
 from converter_calc.page.markup import heading, note, put
@@ -96,12 +96,15 @@ def material_fields() -> None:
             choice_field(name, label, f.materials(kind), FIELD_PX)
     text = "Masses that are given; what is blank is solved for, or is not charged."
     put(text)
-    used = [*f.order, *f.mix] if f.question in ("trim", "predict", "scrap") else []
+    # what has a field of its own, as retained slag, is not charged by name
+    charged = [name for name in f.materials() if f"{name}_kg" not in parameters()]
+    used = [*f.order, *f.mix] if f.question != "steel" else []
     used += [f.fields.get(name, "") for name in ("lime", "magnesia_flux", "coolant", "fuel")]
-    filled = [name[:-3] for name in f.fields if name[:-3] in f.materials() and f.fields[name]]
-    more = st.multiselect("Further materials", f.materials(), key=key_of("more"),
+    filled = [name for name in charged if f.fields.get(f"{name}_kg", "").strip()]
+    more = st.multiselect("Further materials", charged, key=key_of("more"),
                           format_func=plain_name)  # fmt: skip
-    number_fields([f"{name}_kg" for name in dict.fromkeys([*used, *filled, *more]) if name])
+    names = dict.fromkeys([*used, *filled, *more])
+    number_fields([f"{name}_kg" for name in names if name in charged])
 
 
 def _scrap_fields(f: Form) -> None:

@@ -32,6 +32,7 @@ STYLE = """
 .cc-table td, .cc-table th { overflow-wrap: anywhere; }
 .cc-pair { display: grid; grid-template-columns: repeat(auto-fit, minmax(17rem, 1fr));
   gap: 0 1.6rem; }
+.stMultiSelect [data-baseweb="tag"] { background-color: #2960c9; }
 .stMainBlockContainer { padding-top: 2.6rem; padding-bottom: 3rem; }
 """
 

@@ -16,6 +16,7 @@ from converter_calc.balance.frames import row_names
 from converter_calc.balance.heats import HeatTable, heats_from_frame
 from converter_calc.balance.solving import Memory
 from converter_calc.basis.dual import Array
+from converter_calc.basis.errors import ConvergenceError
 from converter_calc.planning.outcome import Outcome
 
 if TYPE_CHECKING:
@@ -80,9 +81,8 @@ def _share_out(frame: pd.DataFrame, shop: Any, solve: Solve, workers: int) -> Co
     shared = np.frombuffer(mmap.mmap(-1, MOST_COLUMNS * n * 8)).reshape(MOST_COLUMNS, n)
     edges = np.linspace(0, n, workers + 1).astype(int).tolist()
     context = multiprocessing.get_context("fork")
-    queue = context.SimpleQueue()
 
-    def work(place: int, first: int, last: int) -> None:
+    def work(pipe: Any, first: int, last: int) -> None:
         gc.disable()  # a process that ends soon need not tidy up
         try:
             columns = _solve_part(frame.iloc[first:last], shop, solve)
@@ -90,35 +90,44 @@ def _share_out(frame: pd.DataFrame, shop: Any, solve: Solve, workers: int) -> Co
             for row, name in enumerate(numbers):
                 shared[row, first:last] = columns[name]
             texts = {name: _packed(x) for name, x in columns.items() if x.dtype == object}
-            queue.put((place, numbers, texts, None))
+            pipe.send((numbers, texts, None))
         except Exception as error:
-            queue.put((place, [], {}, error))
+            pipe.send(([], {}, error))
 
-    parts = list(enumerate(itertools.pairwise(edges)))
-    runs = [context.Process(target=work, args=(place, *edge)) for place, edge in parts]
     gc.freeze()  # the children then do not copy pages only to count references
-    for run in runs:
-        run.start()
+    pipes = []
+    for edge in itertools.pairwise(edges):
+        ours, theirs = context.Pipe(duplex=False)
+        context.Process(target=work, args=(theirs, *edge), daemon=True).start()
+        theirs.close()
+        pipes.append(ours)
     gc.unfreeze()
     ids = _ids(frame)
-    found = sorted((queue.get() for _ in runs), key=lambda answer: answer[0])
-    for run in runs:
-        run.join()
-    for _, _, _, error in found:
+    found = [_answer(pipe) for pipe in pipes]
+    for _, _, error in found:
         if error is not None:
             raise error
-    if all(answer[1] == found[0][1] for answer in found):
-        columns = {name: shared[row] for row, name in enumerate(found[0][1])}
+    if all(answer[0] == found[0][0] for answer in found):
+        columns = {name: shared[row] for row, name in enumerate(found[0][0])}
     else:
         columns = _joined(
             [
-                {name: shared[row, a:b] for row, name in enumerate(answer[1])}
+                {name: shared[row, a:b] for row, name in enumerate(answer[0])}
                 for answer, (a, b) in zip(found, itertools.pairwise(edges), strict=True)
             ]
         )
-    for name in found[0][2]:
-        columns[name] = np.concatenate([_unpacked(answer[2][name]) for answer in found])
+    for name in found[0][1]:
+        columns[name] = np.concatenate([_unpacked(answer[1][name]) for answer in found])
     return {"heat_id": ids, **columns}
+
+
+def _answer(pipe: Any) -> Any:
+    """What a process sends; a ConvergenceError where it died without a word."""
+    try:
+        return pipe.recv()
+    except EOFError:
+        error = ConvergenceError("a process that solved a part of the table was killed")
+        return [], {}, error
 
 
 def _packed(texts: Any) -> tuple[list[str], Any]:
