@@ -2,9 +2,9 @@
 
 from __future__ import annotations
 
-#: Largest dimensionless residual of a solved heat. Rounding leaves about 1e-14; closures
-#: are promised to 1e-9, so this leaves three orders for the scaling of small elements.
-RESIDUAL = 1e-12
+#: Largest dimensionless residual of a solved heat. Rounding leaves 1e-15 to 1e-14; a small
+#: difference of large masses, such as undissolved lime, then still has ten digits.
+RESIDUAL = 1e-13
 #: A heat that stalls above RESIDUAL through rounding still counts as solved below this.
 RESIDUAL_STALLED = 1e-10
 #: Residual from which one more quasi-Newton step is sure to end below RESIDUAL: the steps gain

@@ -51,6 +51,8 @@ def _heat(outcome: Outcome) -> None:
     put(heading("Heat in and out"))
     figure = charts.heat_bars_figure(flows, theme())
     show_figure(figure, "heat_bars", charts.heat_bars_text(flows))
+    terms = tables.heat_balance_table(outcome)
+    terms = terms.sort_values("group", key=lambda names: names.map(GROUPS.index), kind="stable")
     rows = [
         (f"{row.term}", row.group, f"{row.heat_MJ:,.1f}", f"{row.heat_MJ_per_t:,.2f}",
          f"{row.share_pct:.2f}")

@@ -90,9 +90,9 @@ def _share_out(frame: pd.DataFrame, shop: Any, solve: Solve, workers: int) -> Co
             for row, name in enumerate(numbers):
                 shared[row, first:last] = columns[name]
             texts = {name: _packed(x) for name, x in columns.items() if x.dtype == object}
-            pipe.send((numbers, texts, None))
+            pipe.send((numbers, texts, list(columns), None))
         except Exception as error:
-            pipe.send(([], {}, error))
+            pipe.send(([], {}, [], error))
 
     gc.freeze()  # the children then do not copy pages only to count references
     pipes = []
@@ -104,7 +104,7 @@ def _share_out(frame: pd.DataFrame, shop: Any, solve: Solve, workers: int) -> Co
     gc.unfreeze()
     ids = _ids(frame)
     found = [_answer(pipe) for pipe in pipes]
-    for _, _, error in found:
+    for *_, error in found:
         if error is not None:
             raise error
     if all(answer[0] == found[0][0] for answer in found):
@@ -118,7 +118,8 @@ def _share_out(frame: pd.DataFrame, shop: Any, solve: Solve, workers: int) -> Co
         )
     for name in found[0][1]:
         columns[name] = np.concatenate([_unpacked(answer[1][name]) for answer in found])
-    return {"heat_id": ids, **columns}
+    order = dict.fromkeys(name for answer in found for name in answer[2])
+    return {"heat_id": ids, **{name: columns[name] for name in order}}
 
 
 def _answer(pipe: Any) -> Any:
@@ -127,7 +128,7 @@ def _answer(pipe: Any) -> Any:
         return pipe.recv()
     except EOFError:
         error = ConvergenceError("a process that solved a part of the table was killed")
-        return [], {}, error
+        return [], {}, [], error
 
 
 def _packed(texts: Any) -> tuple[list[str], Any]:
