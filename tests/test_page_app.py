@@ -470,7 +470,7 @@ def test_both_ways_of_starting_set_the_same() -> None:
         for key, x in table.items():
             name = f"{place}.{key}".lstrip(".")
             stack.append((name, x)) if isinstance(x, dict) else flat.update({name: x})
-    plain = {k: x if isinstance(x, str) else json.dumps(x) for k, x in flat.items()}
+    plain = {k: x if isinstance(x, str | list) else json.dumps(x) for k, x in flat.items()}
     assert plain == launch.SETTINGS
     assert launch.SETTINGS["server.address"] == "127.0.0.1"
     assert launch.SETTINGS["browser.gatherUsageStats"] == "false"

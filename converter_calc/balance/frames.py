@@ -56,7 +56,7 @@ def columns_of(
 ) -> dict[str, Array]:
     """Numeric columns as float arrays, NaN where blank."""
     arrays: dict[str, Array] = {}
-    _, label = row_names(frame)
+    label = row_label(frame)
     for place, column in enumerate(frame.columns):
         name = str(column)
         if name in arrays:
@@ -108,13 +108,20 @@ def _first(frame: pd.DataFrame, name: str) -> Any:
     return column.iloc[:, 0] if column.ndim > 1 else column
 
 
-def row_names(frame: pd.DataFrame) -> tuple[list[str], Callable[[int], str]]:
-    """Name of each heat, and the words by which a fault names its row."""
+def row_ids(frame: pd.DataFrame) -> list[str]:
+    """Name of each heat: its heat_id, else its index."""
+    named = "heat_id" in frame.columns
+    labels = _first(frame, "heat_id") if named else frame.index
+    return list(map(str, labels.tolist()))
+
+
+def row_label(frame: pd.DataFrame) -> Callable[[int], str]:
+    """The words by which a fault names a row."""
     labels = frame.index
     if "heat_id" in frame.columns:
-        ids = [str(name) for name in _first(frame, "heat_id").tolist()]
-        return ids, lambda i: f" (row {labels[i]}, heat {ids[i]})"
-    return list(map(str, labels.tolist())), lambda i: f" (row {labels[i]})"
+        ids = _first(frame, "heat_id")
+        return lambda i: f" (row {labels[i]}, heat {ids.iloc[i]})"
+    return lambda i: f" (row {labels[i]})"
 
 
 def one_grade(frame: pd.DataFrame, givens: Givens) -> tuple[str | None, list[str]]:

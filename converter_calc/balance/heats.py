@@ -27,7 +27,8 @@ from converter_calc.balance.frames import (
     inputs_of_table,
     keys_of,
     one_grade,
-    row_names,
+    row_ids,
+    row_label,
 )
 from converter_calc.balance.materials import Material
 from converter_calc.balance.schema import (
@@ -190,7 +191,7 @@ def heats_from_frame(
     ):
         for key in {**below, **dict.fromkeys(keys_of(arrays, rows, make))}:
             into[key] = _filled(arrays.get(make(key).name), below.get(key, np.nan), n)
-    ids, label = row_names(frame)
+    ids, label = row_ids(frame), row_label(frame)
     columns = Columns(_all_values(n, givens, arrays), elements, n, place_of=str, row_label=label)
     mass_columns = Columns(
         {f"{name}_kg": kg for name, kg in masses.items()}, {}, n, place_of=str, row_label=label

@@ -20,8 +20,8 @@ from converter_calc.basis.dual import Array, Num
 from converter_calc.basis.units import MJ, ZERO_C_K
 from converter_calc.thermo.enthalpy import enthalpy_J_kg
 
-#: Newton on a nearly straight line: the fourth step is at rounding.
-GAS_TEMPERATURE_STEPS = 4
+#: Newton on a nearly straight line: 400 K, 8 K, 3 mK, then below 1e-9 K.
+GAS_TEMPERATURE_STEPS = 3
 
 
 @dataclass

@@ -6,12 +6,12 @@ import sys
 from pathlib import Path
 
 #: Server settings; the same stand in .streamlit/config.toml for `streamlit run app.py`.
-SETTINGS = {
+SETTINGS: dict[str, str | list[str]] = {
     "server.address": "127.0.0.1",
     "server.headless": "true",
     "server.fileWatcherType": "none",
     "server.maxUploadSize": "5",
-    "server.allowedHosts": '["localhost", "127.0.0.1"]',
+    "server.allowedHosts": ["localhost", "127.0.0.1"],
     "browser.gatherUsageStats": "false",
     "client.toolbarMode": "minimal",
     "client.showErrorDetails": "type",
@@ -24,7 +24,11 @@ SETTINGS = {
 def arguments(port: int) -> list[str]:
     """The command line of the server."""
     script = Path(__file__).with_name("script.py")
-    flags = [f"--{name}={value}" for name, value in SETTINGS.items()]
+    flags = [
+        f"--{name}={value}"
+        for name, given in SETTINGS.items()
+        for value in ([given] if isinstance(given, str) else given)
+    ]
     return ["streamlit", "run", str(script), f"--server.port={port}", *flags]
 
 

@@ -12,7 +12,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from converter_calc.balance.frames import row_names
+from converter_calc.balance.frames import row_ids
 from converter_calc.balance.heats import HeatTable, heats_from_frame
 from converter_calc.balance.solving import Memory
 from converter_calc.basis.dual import Array
@@ -57,7 +57,7 @@ def solve_table(frame: pd.DataFrame, shop: Any, solve: Solve) -> pd.DataFrame:
 
 
 def _ids(frame: pd.DataFrame) -> Any:
-    return np.array(row_names(frame)[0], dtype=object)
+    return np.array(row_ids(frame), dtype=object)
 
 
 def _workers(n: int) -> int:
