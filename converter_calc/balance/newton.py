@@ -283,6 +283,7 @@ def solve(
     reach: Mapping[str, Reach],
     indices: Array,
     most_steps: int = MOST_STEPS,
+    residual: float = RESIDUAL,
 ) -> Solved:
     """Solve n systems of equal shape.
 
@@ -290,7 +291,7 @@ def solve(
     ----------
     equations : asked with the indices of the heats still unsolved and their unknowns.
     start : first guess, arrays (n,). reach : limits of a step. indices : heats, (n,) ints.
-    most_steps : Jacobians before a heat is left as it stands.
+    most_steps : Jacobians before a heat is left as it stands. residual : what counts as solved.
 
     Returns
     -------
@@ -316,12 +317,13 @@ def solve(
                 answer[name][active] = x[name]
             stalled = norm >= norm_of[active]
             norm_of[active] = norm
-            done = (norm <= RESIDUAL) | ((norm <= RESIDUAL_STALLED) & stalled)
+            done = (norm <= residual) | ((norm <= RESIDUAL_STALLED) & stalled)
             if done.any():
                 active = active[~done]
                 here = indices[active]
                 x = {name: x[name][~done] for name in names}
-    return Solved(answer, norm_of, steps_of, norm_of <= RESIDUAL_STALLED)
+    solved = norm_of <= max(residual, RESIDUAL_STALLED)
+    return Solved(answer, norm_of, steps_of, solved)
 
 
 def _advance(

@@ -41,6 +41,8 @@ EXTENSIVE = {
     "trim_kg": 0.05,
     "heat_loss_J": 1e6,
 }
+#: Residual at which a heat of the sample is good enough to start others from.
+GOOD_START = 1e-7
 #: Standard deviations at which an input is cut off in the fit, so that an outlier among the
 #: inputs does not throw its start far off.
 OUTLIER = 4.0
@@ -196,7 +198,7 @@ def _sample(system: System, guess: Unknowns) -> Fit | None:
     size = max(SAMPLE, 6 * (1 + inputs.shape[0]))
     rows = np.unique(np.linspace(0, p.n - 1, min(size, p.n // 4)).astype(int))
     begin = {name: x[rows] for name, x in guess.items()}
-    solved = solve(system, begin, REACH, rows, QUICK_STEPS)
+    solved = solve(system, begin, REACH, rows, QUICK_STEPS, GOOD_START)
     good = np.flatnonzero(solved.converged)
     if good.size < max(16, rows.size // 2):
         return None

@@ -197,6 +197,8 @@ class Program:
 
     def __init__(self, tape: Tape, outputs: Sequence[Any], block: int) -> None:
         self.block = block
+        self._cut_size = 0
+        self._cut_registers: list[Any] = []
         self.outputs = [x.index if isinstance(x, Trace) else float(x) for x in outputs]
         self._is_trace = [isinstance(x, Trace) for x in outputs]
         needed = self._needed(tape)
@@ -310,9 +312,13 @@ class Program:
         """The registers, cut to a block of `size` heats."""
         if size == self.block:
             return self._registers
-        return [
-            x[..., :size] if isinstance(x, np.ndarray) and x.ndim else x for x in self._registers
-        ]
+        if self._cut_size != size:
+            self._cut_size = size
+            self._cut_registers = [
+                x[..., :size] if isinstance(x, np.ndarray) and x.ndim else x
+                for x in self._registers
+            ]
+        return self._cut_registers
 
     def run(self, inputs: Mapping[str, Any], n: int) -> list[Any]:
         """Values of the outputs: arrays (n,), and plain numbers where an output is one.
