@@ -235,6 +235,19 @@ def test_shop_goes_under_the_heat() -> None:
     assert form.fields["hm_Si_pct"] == start_form().fields["hm_Si_pct"]
 
 
+@pytest.mark.parametrize("name", NAMES)
+def test_shop_then_heat_make_the_demo_heat(name: str) -> None:
+    shop, heat = (
+        tomllib.loads((DEMO / f"{stem}.toml").read_text(encoding="utf-8"))
+        for stem in ("shop", name)
+    )
+    form = documents.form_with_shop(shop, start_form())
+    form, _ = documents.form_with_heat(heat, form, shop)
+    by_file = converter_calc.plan(DEMO / f"{name}.toml")
+    found = converter_calc.plan(document_of(form))
+    assert recipe_of(found) == pytest.approx(recipe_of(by_file), rel=1e-10)
+
+
 def test_heat_and_shop_saved_apart_make_the_whole() -> None:
     from converter_calc.balance.documents import lay_over
 

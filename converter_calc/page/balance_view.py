@@ -81,4 +81,4 @@ def _elements(outcome: Outcome) -> None:
     ]  # fmt: skip
     put(heading("Element balance"))
     headings = ("element", "in, kg", "out, kg", "relative closure", *(f"% {p}" for p in places))
-    put(table_html("element balance", headings, rows))
+    put(table_html("element balance", headings, rows, wide=True))

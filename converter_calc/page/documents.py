@@ -46,19 +46,24 @@ def parse_document(content: bytes, name: str) -> dict[str, Any]:
     return document
 
 
-def form_with_heat(document: Mapping[str, Any], now: Form) -> tuple[Form, str]:
+def form_with_heat(
+    document: Mapping[str, Any], now: Form, shop: Mapping[str, Any] | None = None
+) -> tuple[Form, str]:
     """The form of a loaded heat, and a sentence on the shop it was laid over.
 
+    shop : the shop file loaded last, whole, with the aims it may hold; None: that of the fields.
     Raises InputError with every fault of the document.
     """
     if "shop" not in document:
         return form_of(document), "The heat is complete on its own."
     own = {key: x for key, x in document.items() if key != "shop"}
-    shop = shop_part(document_of(now))
-    text = (
-        "The heat names a shop file; the shop in the fields is laid under it. If that is not "
-        "the one meant, load the shop file first, then the heat again."
-    )
+    text = "The heat names a shop file; the one loaded last is laid under it."
+    if shop is None:
+        shop = shop_part(document_of(now))
+        text = (
+            "The heat names a shop file, and none was loaded; the shop in the fields is laid "
+            "under it. If that is not the one meant, load the shop, then the heat again."
+        )
     return form_of(lay_over(shop, own)), text
 
 

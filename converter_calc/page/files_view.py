@@ -70,9 +70,10 @@ def _take_file(key: str, kind: str) -> None:
         document = parse_document(file.getvalue(), file.name)
         text = "The shop is in the fields, under the heat that was there."
         if kind == "heat":
-            new, text = form_with_heat(document, form())
+            new, text = form_with_heat(document, form(), st.session_state.get("cc_shop"))
         else:
             new = form_with_shop(document, form())
+            st.session_state["cc_shop"] = document
     except InputError as error:
         title = f"{file.name} was not taken; the fields are as they were:"
         message = ("fault", title, _shortened(fault_texts(error.faults)))

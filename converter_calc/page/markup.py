@@ -30,6 +30,9 @@ STYLE = """
 .cc-page h2, h2.cc { font-size: 1.15rem; padding: .9rem 0 .25rem 0; margin: 0; }
 .cc-small { font-size: .86rem; }
 .cc-table td, .cc-table th { overflow-wrap: anywhere; }
+.cc-wide { overflow-x: auto; }
+.cc-wide td, .cc-wide th { white-space: nowrap; padding-right: .7rem; }
+.cc-wide thead th { white-space: normal; min-width: 4.2rem; }
 .cc-pair { display: grid; grid-template-columns: repeat(auto-fit, minmax(17rem, 1fr));
   gap: 0 1.6rem; }
 .stMultiSelect [data-baseweb="tag"] { background-color: #2960c9; }
@@ -50,11 +53,12 @@ def table_html(
     numeric: int = 1,
     large: bool = False,
     parts: Iterable[int] = (),
+    wide: bool = False,
 ) -> Markup:
     """A table: the first cell of a row names it, cells from place `numeric` on are numbers.
 
     name : for those who cannot see the heading above. parts : numbers of the rows that are a
-    part of the row above.
+    part of the row above. wide : many columns; scrolls sideways by itself on a small screen.
     """
     inset = set(parts)
     head = [
@@ -70,13 +74,18 @@ def table_html(
         ]
         marks = {"class_": "cc-part"} if number in inset else {}
         body.append(element("tr", *cells, **marks))
-    return element(
+    table = element(
         "table",
         element("thead", element("tr", *head)),
         element("tbody", *body),
         class_="cc-table cc-large" if large else "cc-table",
         aria_label=name,
     )
+    if not wide:
+        return table
+    # a region that scrolls has to be reached by the keyboard
+    label = f"{name}, scrolls sideways"
+    return element("div", table, class_="cc-wide", tabindex=0, role="region", aria_label=label)
 
 
 def rows_of(table: Any) -> Iterable[Any]:

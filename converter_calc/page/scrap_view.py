@@ -144,7 +144,8 @@ def _grid_html(table: pd.DataFrame, name: str) -> Any:
                              for x in row[::2]))
         for temp, row in zip(table.index, table.to_numpy(), strict=True)
     ]  # fmt: skip
-    return table_html(name, ("hot metal", *(f"{share:.1f} %" for share in shares)), rows)
+    return table_html(name, ("hot metal", *(f"{share:.1f} %" for share in shares)), rows,
+                      wide=True)  # fmt: skip
 
 
 def _downloads(frame: pd.DataFrame) -> None:

@@ -205,7 +205,7 @@ class Outcome:
         return np.nan if found is None else found / (self.state.steel_kg * 1e-3)
 
     def columns(self) -> dict[str, Any]:
-        """The table of results, a column a quantity, arrays (n,)."""
+        """The table of results, a column a quantity, arrays (n,), some of them read-only views."""
         s, n = self.state, self.n
         table: dict[str, Any] = {"heat_id": np.array(self.heats.ids, dtype=object)}
         table["status"] = np.array(self.status, dtype=object)
@@ -229,7 +229,10 @@ class Outcome:
             **{name: s.laws[name] for name in ("L_P", "L_Mn", "L_S") if name in s.laws},
             "cost_per_t": self.cost(),
         }
-        table |= {name: spread(x, n) for name, x in (numbers | more).items()}
+        table |= {
+            name: np.broadcast_to(np.asarray(x, dtype=float), (n,))
+            for name, x in (numbers | more).items()
+        }
         table["warnings"] = self.warning_codes()
         return table
 

@@ -189,9 +189,10 @@ def result_columns(outcome: Outcome) -> dict[str, Any]:
     table = outcome.columns()
     table.pop("heat_id")
     bad = np.array([status != "solved" for status in outcome.status], dtype=bool)
-    for values in table.values():  # an unsolved heat shows no numbers of its own
-        if bad.any() and values.dtype != object:
-            values[bad] = np.nan
+    if bad.any():  # an unsolved heat shows no numbers of its own
+        for name, values in table.items():
+            if values.dtype != object:
+                table[name] = np.where(bad, np.nan, values)
     table["binding"] = np.array(outcome.binding, dtype=object)
     for name in ("end_temp_C", "end_C_pct", "end_P_pct"):
         column = np.full(outcome.n, np.nan)

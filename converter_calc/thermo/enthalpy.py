@@ -171,19 +171,39 @@ class _Interval:
     """Coefficients of all species of a set between two neighbouring breakpoints."""
 
     def __init__(self, h: Array, cp: Array) -> None:
-        used = np.any(h != 0.0, axis=0) | np.any(cp != 0.0, axis=0)
-        self.columns = [int(i) for i in np.flatnonzero(used)] or [0]
-        self.h = np.ascontiguousarray(h[:, self.columns])
-        self.both = np.vstack([self.h, cp[:, self.columns]])
+        self.h = _Product(h)
+        self.both = _Product(np.vstack([h, cp]))
 
     def write(self, T_K: Array, out: Array, *, slopes: bool) -> None:
-        """Write H, or H and below it cp, of all species at T (n,) into `out`.
+        """Write H, or H and below it cp, of all species at T (n,) into `out`."""
+        (self.both if slopes else self.h).write(T_K, out)
 
-        Not by `@`: for so thin a product the linear algebra library wakes a second thread,
-        which may cost a hundred times the work, or takes a slow path on one.
-        """
-        a = self.both if slopes else self.h
-        np.einsum("ij,jk->ik", a, _basis_values(T_K, self.columns), out=out)
+
+class _Product:
+    """Coefficients (rows, basis) times basis functions: powers for all, the rest where needed.
+
+    Not by `@`: for so thin a product the linear algebra library wakes a second thread, which
+    may cost a hundred times the work, or takes a slow path on one.
+    """
+
+    def __init__(self, table: Array) -> None:
+        used = np.flatnonzero(np.any(table != 0.0, axis=0)).tolist()
+        self.powers = [column for column in used if column <= _HIGHEST_POWER] or [0]
+        self.table = np.ascontiguousarray(table[:, self.powers])
+        self.others = [column for column in used if column > _HIGHEST_POWER]
+        self.extra = [
+            (row, place, float(table[row, column]))
+            for place, column in enumerate(self.others)
+            for row in np.flatnonzero(table[:, column]).tolist()
+        ]
+
+    def write(self, T_K: Array, out: Array) -> None:
+        """Write the products at T (n,) into `out` (rows, n)."""
+        np.einsum("ij,jk->ik", self.table, _basis_values(T_K, self.powers), out=out)
+        if self.extra:
+            basis = _basis_values(T_K, self.others)
+            for row, place, coefficient in self.extra:
+                out[row] += coefficient * basis[place]
 
 
 class EnthalpySet:
