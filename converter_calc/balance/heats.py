@@ -95,6 +95,8 @@ class HeatTable:
         rows = np.arange(self.n)[index]
 
         def pick(columns: Mapping[str, Array]) -> dict[str, Array]:
+            if isinstance(index, slice):
+                return {name: array[index] for name, array in columns.items()}
             return {
                 name: np.broadcast_to(array[:1], rows.shape)
                 if array.strides == (0,) and self.n

@@ -17,7 +17,7 @@ from converter_calc.planning.outcome import at
 from converter_calc.planning.solving import complete_charge
 
 ELEMENTS = ("C", "Si", "Mn", "P", "S", "Ti", "V", "Cr")
-FIELD_PX, SMALL_PX, WIDE_PX = 150, 70, 300
+FIELD_PX, SMALL_PX, WIDE_PX = 136, 70, 288
 AIMS = ("aim_temp_C", "aim_C_pct", "aim_P_pct", "aim_S_pct", "aim_Mn_pct", "aim_basicity",
         "aim_MgO_pct")  # fmt: skip
 PRACTICE_FIRST = ("heat_loss_MJ_per_t", "heat_loss_MJ_per_min", "wait_min", "blow_min",

@@ -52,5 +52,14 @@ def launch(port: int = 8501) -> None:
         from streamlit.web import cli
     except ImportError as error:
         raise InputError([Fault("page", "streamlit is not installed")]) from error
+    _warm_up()
     sys.argv = arguments(port)
     sys.exit(cli.main())
+
+
+def _warm_up() -> None:
+    """Load and solve once, so that the first session does not wait for it."""
+    from converter_calc.page import session, shell  # noqa: F401
+    from converter_calc.page.form import document_of
+
+    session.solve(document_of(session.start_form()), predict=False)

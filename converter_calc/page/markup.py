@@ -29,7 +29,7 @@ STYLE = """
 .cc-page h1 { font-size: 1.5rem; padding: 0; margin: 0; }
 .cc-page h2, h2.cc { font-size: 1.15rem; padding: .9rem 0 .25rem 0; margin: 0; }
 .cc-small { font-size: .86rem; }
-.cc-table td, .cc-table th { overflow-wrap: anywhere; }
+.cc-table td { overflow-wrap: anywhere; }
 .cc-wide { overflow-x: auto; }
 .cc-wide td, .cc-wide th { white-space: nowrap; padding-right: .7rem; }
 .cc-wide thead th { white-space: normal; min-width: 4.2rem; }

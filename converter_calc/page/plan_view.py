@@ -51,13 +51,12 @@ def _reasons(outcome: Outcome) -> None:
             with opened:
                 reason = reason_for(outcome, figure)
                 rows = term_rows((t.label, t.value, t.unit, t.source) for t in reason.terms)
+                headings: tuple[str, ...] = ("term", "value", "unit", "source")
+                if not any(row[3] for row in rows):
+                    rows, headings = [row[:3] for row in rows], headings[:3]
                 put(reason.reason)
                 if rows:
-                    put(
-                        table_html(
-                            figure.name, ("term", "value", "unit", "source"), rows, numeric=9
-                        )
-                    )
+                    put(table_html(figure.name, headings, rows, numeric=9))
 
 
 def _inputs_used(found: Answer) -> None:

@@ -174,6 +174,6 @@ def _warned(warnings: Iterable[dict[str, str]], place: str) -> Markup:
     return note("note", "Warnings", texts) if texts else Markup("")
 
 
-def term_rows(terms: Iterable[tuple[str, float, str, str]]) -> list[tuple[str, str, str, str]]:
+def term_rows(terms: Iterable[tuple[str, float, str, str]]) -> list[tuple[str, ...]]:
     """Terms of an explanation as rows of text: label, value, unit, source."""
     return [(label, number(x), unit, source) for label, x, unit, source in terms]

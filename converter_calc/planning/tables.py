@@ -53,7 +53,12 @@ def solve_table(frame: pd.DataFrame, shop: Any, solve: Solve) -> pd.DataFrame:
         columns = _share_out(frame, shop, solve, workers)
     else:
         columns = {"heat_id": _ids(frame), **_solve_part(frame, shop, solve)}
-    return pd.DataFrame(columns, index=frame.index, copy=False)
+    # texts stay objects: to guess their type anew would cost as much as a tenth of the solve
+    table = {
+        name: pd.Series(x, index=frame.index, dtype=object, copy=False) if x.dtype == object else x
+        for name, x in columns.items()
+    }
+    return pd.DataFrame(table, index=frame.index, copy=False)
 
 
 def _ids(frame: pd.DataFrame) -> Any:
@@ -133,6 +138,8 @@ def _answer(pipe: Any) -> Any:
 
 def _packed(texts: Any) -> tuple[list[str], Any]:
     """Texts as the different ones among them and a number each: few bytes to send."""
+    if (texts == texts[0]).all():
+        return [texts[0]], np.zeros(len(texts), dtype=np.int32)
     places: dict[str, int] = {}
     codes = [places.setdefault(text, len(places)) for text in texts.tolist()]
     return list(places), np.array(codes, dtype=np.int32)
