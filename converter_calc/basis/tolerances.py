@@ -18,7 +18,7 @@ MOST_STEPS = 60
 QUICK_STEPS = 4
 #: Rows from which a table is solved from a sample of its own heats, and the least sample.
 SAMPLED_FROM = 3000
-SAMPLE = 240
+SAMPLE = 200
 #: Rows from which residuals are recorded and replayed: recording costs about as much as
 #: working out the residuals of 10,000 heats.
 RECORDED_FROM = 2000
@@ -33,7 +33,7 @@ MOST_HALVINGS = 6
 #: together: large enough to make a numpy call (about 1 microsecond) small beside its work, small
 #: enough for the buffers (about 50) to stay in the last-level cache. Measured from 1024 to
 #: 16384: half the time of 1024, flat from here on.
-BLOCK = 4096
-CHUNK = 8192
+BLOCK = 8192
+CHUNK = 16384
 #: Width at which the two sides of a complementarity condition meet, dimensionless.
 CORNER = 1e-8

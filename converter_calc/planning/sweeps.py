@@ -215,10 +215,10 @@ def _free_trim(heats: HeatTable) -> HeatTable:
     end = copy.values["pin_end_temp_C"]
     aim = np.where(np.isfinite(end), end, copy.values["aim_temp_C"])
     copy = with_values(copy, pin_end_temp_C=np.nan, aim_temp_C=aim)
+    choices = replace(copy.choices, ask=None)
     if any(scraps.values()):
-        mix = _whole_mix(heats, scraps)
-        return replace(copy, choices=replace(copy.choices, scrap_mix=mix, scrap_order=[]))
-    return copy
+        choices = replace(choices, scrap_mix=_whole_mix(heats, scraps), scrap_order=[])
+    return replace(copy, choices=choices)
 
 
 def _whole_mix(heats: HeatTable, named: Mapping[str, float]) -> dict[str, float]:

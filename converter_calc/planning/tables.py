@@ -25,7 +25,7 @@ if TYPE_CHECKING:
 #: Rows of a table that are solved at once, and that are read off at once: they bound the
 #: memory of a long table, and the second keeps its arrays in cache.
 ROWS_AT_ONCE = 65536
-ROWS_READ_OFF = 8192
+ROWS_READ_OFF = 16384
 #: Rows from which a table is shared out among processes: starting them costs about as much
 #: as solving 3000 heats.
 SHARED_FROM = 30000

@@ -81,7 +81,7 @@ def scrap_map_figure(
         even = both[0] / np.nanmax(both[0]) - both[1] / np.nanmax(both[1])
         figure.add_trace(
             go.Contour(x=x, y=y, z=even, showscale=False, hoverinfo="skip", name="neither needed",
-                       showlegend=True, line={"width": 3, "color": "#1b1f24"},
+                       showlegend=True, line={"width": 3, "color": text},
                        contours={"start": 0.0, "end": 0.0, "size": 1.0, "coloring": "none"})
         )  # fmt: skip
     if today is not None:
