@@ -81,12 +81,15 @@ def test_every_map_point_is_the_plan_of_that_heat(ordinary, scrap_map):
 
 def test_cost_and_CO2_are_sums_over_the_recipe(ordinary, scrap_map):
     """worked: prices and CO2 from the shop file, carbon from the element balance."""
-    shop = tomllib.loads((DEMO / "shop.toml").read_text("utf-8"))["materials"]
+    whole = tomllib.loads((DEMO / "shop.toml").read_text("utf-8"))
+    shop, price = whole["materials"], whole["price"]
     row = next(scrap_map.itertuples())
     document = alone(ordinary, row).document()
     steel_t = document["end_point"]["steel_kg"] / 1000.0
     kg = {key[:-3]: x for key, x in document["recipe"].items() if key.endswith("_kg")}
     cost = sum(kg.get(name, 0.0) * row.get("price_per_t", 0.0) for name, row in shop.items()) / 1e3
+    cost += kg["hot_metal"] / 1e3 * price["hot_metal_per_t"]
+    cost += document["recipe"]["oxygen_Nm3"] * price["oxygen_per_Nm3"]
     making = sum(kg.get(name, 0.0) * row.get("CO2_kg_per_t", 0.0) for name, row in shop.items())
     np.testing.assert_allclose(row.cost_per_t, cost / steel_t, **TIGHT)
     np.testing.assert_allclose(row.CO2_materials_kg_per_t, making / 1e3 / steel_t, **TIGHT)
@@ -105,7 +108,9 @@ def test_columns_say_what_cost_and_CO2_count(ordinary, scrap_map):
     assert "burnt lime, dolomitic lime" in columns["CO2_kg_per_t"].note
     assert "lump ore" not in columns["CO2_kg_per_t"].note
     assert "lump ore" in columns["cost_per_t"].note
-    assert "hot metal" not in columns["cost_per_t"].note
+    assert "hot metal, oxygen" in columns["cost_per_t"].note
+    unpriced = {"price_hot_metal_per_t": np.nan, "price_oxygen_per_Nm3": np.nan}
+    assert "hot metal" not in map_columns(with_values(ordinary, **unpriced))["cost_per_t"].note
 
 
 def test_today_lies_on_the_map_where_no_coolant_is_needed(ordinary):
