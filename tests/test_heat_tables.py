@@ -188,3 +188,35 @@ def test_several_grades_set_no_aim():
     table = heats_from_frame(log(grade=["S235JR", "DC04", None]))
     assert table.grade is None
     assert "grade: 2 grades in one table" in table.warnings[0]
+
+
+def test_rows_that_give_scrap_in_different_ways_solve_as_they_do_alone() -> None:
+    """Identity: a share in one row and a mass in the next leave blanks in each other's column."""
+    import converter_calc
+
+    heat = {"hot_metal_kg": 160e3, "hot_metal_temp_C": 1340.0, "hm_C_pct": 4.4, "hm_Si_pct": 0.5}
+    heat |= {"hm_Mn_pct": 0.4, "hm_P_pct": 0.1, "hm_S_pct": 0.01}
+    heat |= {"aim_temp_C": 1660.0, "aim_C_pct": 0.05, "aim_P_pct": 0.015}
+    rows = [heat, heat | {"scrap_share_pct": 15.0}, heat | {"scrap_kg": 30e3}, heat]
+    shop = {"choice": {"scrap_mix": {"heavy_scrap": 1.0}}}
+    together = converter_calc.plan(pd.DataFrame(rows), shop=shop)
+    assert together["status"].tolist() == ["solved"] * 4
+    for k, row in enumerate(rows):
+        alone = converter_calc.plan(pd.DataFrame([row]), shop=shop)
+        for name in ("scrap_total_kg", "burnt_lime_kg", "oxygen_Nm3", "end_P_pct"):
+            np.testing.assert_allclose(together[name][k], alone[name][0], rtol=1e-10)
+
+
+def test_a_blank_analysis_is_told() -> None:
+    """Contract: what is missing is missing; where it counts as zero, the result says so."""
+    import converter_calc
+
+    heat = {"hot_metal_kg": 160e3, "hot_metal_temp_C": 1340.0, "hm_C_pct": 4.4}
+    heat |= {"aim_temp_C": 1660.0, "aim_C_pct": 0.05}
+    shop = {"choice": {"scrap_mix": {"heavy_scrap": 1.0}}}
+    told = converter_calc.plan(pd.DataFrame([heat, heat | {"hm_Si_pct": 0.4}]), shop=shop)
+    assert "analysis-blank" in told["warnings"][0]
+    single = {"hot_metal": {"mass_kg": 160e3, "temp_C": 1340.0, "C_pct": 4.4}, **shop}
+    single["aim"] = {"temp_C": 1660.0, "C_pct": 0.05}
+    texts = [w["message"] for w in converter_calc.plan(single).document()["warnings"]]
+    assert any("no Si is given" in text for text in texts)

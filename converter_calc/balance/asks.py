@@ -78,11 +78,10 @@ def first_guess(p: Problem, ask: Ask) -> Unknowns:
     scrap = hot_metal * 0.22
     if ask.heat == "scrap_kg":
         charged = charged + scrap
-    elif "scrap_share_pct" in p.values:
-        share = _array(p.values["scrap_share_pct"], n) * 0.01
+    else:  # blank where another heat of the table gives it
+        share = np.nan_to_num(_array(p.values.get("scrap_share_pct", 0.0), n)) * 0.01
         charged = charged + hot_metal * share / (1.0 - share)
-    elif "scrap_kg" in p.values:
-        charged = charged + _array(p.values["scrap_kg"], n)
+        charged = charged + np.nan_to_num(_array(p.values.get("scrap_kg", 0.0), n))
     guesses = {
         "metal_kg": np.maximum(charged, 0.05 * scale),
         "slag_kg": 0.03 * hot_metal + 9.0 * silicon,

@@ -167,6 +167,15 @@ def _charge(outcome: Outcome) -> list[Caution]:
             {"kg": hidden},
         )
     )
+    found += [
+        Caution(
+            "analysis-blank",
+            f"hot_metal.{element}_pct",
+            np.isnan(outcome.heats.values[f"hm_{element}_pct"]),
+            f"no {element} is given for the hot metal: it is taken as 0",
+        )
+        for element in ("Si", "Mn", "P", "S")
+    ]
     oxygen = outcome.heats.values["oxygen_Nm3"]
     if outcome.ask.end == "oxygen_Nm3":
         found.append(
