@@ -357,3 +357,21 @@ def test_no_dissolved_oxygen_has_no_traceback(tmp_path: Path) -> None:
     file.write_text(text, encoding="utf-8")
     result = run("plan", file)
     assert result.exit_code in (0, 2, 3)
+
+
+def test_a_heat_without_any_silicon_predicts_quietly(tmp_path: Path) -> None:
+    """Contract: plain JSON, nothing on standard error; CaO/SiO2 that does not exist is null."""
+    file = tmp_path / "no_silicon.toml"
+    text = (
+        "[hot_metal]\nmass_kg = 1000\ntemp_C = 1300\nC_pct = 4.0\n[aim]\nC_pct = 0.1\n"
+        "[charge]\npure_iron_kg = 100\npure_lime_kg = 50\n"
+        "[practice]\ncarryover_slag_pct = 0\nlining_wear_kg_per_t = 0\ndust_kg_per_t = 0\n"
+        "[pin]\nend_temp_C = 1650\n"
+        '[materials.pure_iron]\nkind = "scrap"\npct = { Fe = 100 }\n'
+        '[materials.pure_lime]\nkind = "flux"\npct = { CaO = 100 }\n'
+    )
+    file.write_text(text, encoding="utf-8")
+    result = run("predict", file, "--json", "-")
+    assert result.exit_code == 0
+    assert json.loads(result.stdout)["end_point"]["basicity"] is None
+    assert run("predict", file).exit_code == 0

@@ -3,11 +3,19 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, field
+from typing import Any
+
+import numpy as np
 
 from converter_calc.balance.charge import Totals
 from converter_calc.basis.dual import Num
 
 GASES = ("CO", "CO2", "H2", "H2O", "N2", "Ar", "SO2", "O2")
+
+
+def _quietly() -> Any:
+    """A slag without silica has no CaO/SiO2: infinite or not a number, and no noise about it."""
+    return np.errstate(divide="ignore", invalid="ignore")
 
 
 @dataclass
@@ -45,9 +53,11 @@ class State:
     @property
     def basicity(self) -> Num:
         """CaO/SiO2 by mass of the slag as a sample shows it, undissolved lime included."""
-        return self.liquid_basicity + self.undissolved_kg / self.slag_species_kg["SiO2"]
+        with _quietly():
+            return self.liquid_basicity + self.undissolved_kg / self.slag_species_kg["SiO2"]
 
     @property
     def liquid_basicity(self) -> Num:
         """CaO/SiO2 of the liquid slag by mass, CaS counted as the lime it was."""
-        return self.slag_pct["CaO"] / self.slag_pct["SiO2"]
+        with _quietly():
+            return self.slag_pct["CaO"] / self.slag_pct["SiO2"]

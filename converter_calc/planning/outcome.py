@@ -266,7 +266,8 @@ class Outcome:
         def plain(x: Any) -> Any:
             if isinstance(x, Mapping):
                 return {key: plain(part) for key, part in x.items()}
-            return float(at(x, index))
+            number = float(at(x, index))
+            return number if np.isfinite(number) else None  # CaO/SiO2 of a slag without silica
 
         streams = [
             {

@@ -98,8 +98,9 @@ def solve_groups(
     for rows, group, ask in grouping(heats):
         size = rows_read_off or max(group.n, 1)
         for place, outcome in enumerate(solve_in_parts(group, ask, size, memory)):
-            finish(outcome)
-            outcome.cautions = [*cautions_of(outcome), *grade_notes(outcome)]
+            with np.errstate(all="ignore"):  # what is not a number there is told as no answer
+                finish(outcome)
+                outcome.cautions = [*cautions_of(outcome), *grade_notes(outcome)]
             yield rows[place * size : (place + 1) * size], outcome
 
 
