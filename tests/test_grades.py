@@ -252,7 +252,7 @@ def test_practice_of_the_shop_replaces_the_default_only() -> None:
 
 def test_faults_in_the_library_are_data_errors(monkeypatch: pytest.MonkeyPatch) -> None:
     """Contract: a broken data file is not the user's fault."""
-    from converter_calc.planning import grade_library
+    from converter_calc.tapping import grade_library
 
     grade_library._library.cache_clear()
     monkeypatch.setattr(grade_library, "read_toml", lambda _: {"Q": {"limits": {"C": [0, 1]}}})

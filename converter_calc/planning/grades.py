@@ -1,14 +1,14 @@
 """Grades, the converter aims derived from them, and tramp limits: the names to import."""
 
-from converter_calc.planning.aims import ConverterAim, Term, converter_aim, ladle_targets
-from converter_calc.planning.grade_library import Grade, Limit, grade, grades, parse_user_grade
-from converter_calc.planning.tap_practice import Addition, TapPractice, additions, tap_practice
 from converter_calc.planning.tramp import (
     TrampCheck,
     largest_fitting_share,
     tell_tramp,
     worst_element,
 )
+from converter_calc.tapping.aims import ConverterAim, Term, converter_aim, ladle_targets
+from converter_calc.tapping.grade_library import Grade, Limit, grade, grades, parse_user_grade
+from converter_calc.tapping.tap_practice import Addition, TapPractice, additions, tap_practice
 
 __all__ = [
     "Addition",

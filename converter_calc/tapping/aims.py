@@ -16,8 +16,8 @@ from typing import NamedTuple
 import numpy as np
 
 from converter_calc.basis.errors import InfeasibleError
-from converter_calc.planning.grade_library import Grade
-from converter_calc.planning.tap_practice import Addition, TapPractice
+from converter_calc.tapping.grade_library import Grade
+from converter_calc.tapping.tap_practice import Addition, TapPractice
 
 TAPPED_KG = 1000.0
 ALWAYS_AIMED = ("Mn", "Si")

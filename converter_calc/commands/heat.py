@@ -1,0 +1,101 @@
+"""Commands about one heat: plan it, predict it, explain it; and the lists behind them."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import Any
+
+import click
+
+from converter_calc.commands.shared import HEAT, JSON, UNITS, guarded, write_json
+
+
+def _show(outcome: Any, json_to: str | None, units: str) -> None:
+    if not write_json(outcome.document(), json_to):
+        from converter_calc.reporting.charge_sheet import charge_sheet
+
+        click.echo(charge_sheet(outcome, units=units), nl=False)
+
+
+@click.command()
+@HEAT
+@JSON
+@UNITS
+@guarded
+def plan(heat: Path, json_to: str | None, units: str) -> None:
+    """Solve for what is missing from the charge of HEAT and print the charge sheet."""
+    from converter_calc.planning.plan import plan as plan_heat
+
+    _show(plan_heat(heat), json_to, units)
+
+
+@click.command()
+@HEAT
+@JSON
+@UNITS
+@guarded
+def predict(heat: Path, json_to: str | None, units: str) -> None:
+    """Print where the blow of HEAT ends; its charge is complete."""
+    from converter_calc.planning.plan import predict as predict_heat
+
+    _show(predict_heat(heat), json_to, units)
+
+
+@click.command()
+@HEAT
+@click.argument("quantity")
+@click.option("--predict", "as_predict", is_flag=True, help="The charge is complete.")
+@guarded
+def explain(heat: Path, quantity: str, *, as_predict: bool) -> None:
+    """Show how QUANTITY of HEAT comes about: lime, oxygen, scrap, temperature, phosphorus ..."""
+    from converter_calc.planning import plan as planning
+    from converter_calc.planning.explain import check_quantity
+    from converter_calc.planning.explain import explain as explain_heat
+
+    check_quantity(quantity)
+    outcome = planning.predict(heat) if as_predict else planning.plan(heat)
+    click.echo(explain_heat(outcome, quantity).text())
+
+
+@click.command()
+@HEAT
+@guarded
+def sensitivity(heat: Path) -> None:
+    """Show how end point and charge of a planned HEAT change with each input."""
+    from converter_calc.planning.plan import plan as plan_heat
+    from converter_calc.planning.sensitivities import sensitivities
+    from converter_calc.reporting.text_tables import sensitivity_text
+
+    click.echo(sensitivity_text(sensitivities(plan_heat(heat))), nl=False)
+
+
+@click.command()
+@click.argument("name", required=False)
+@guarded
+def grades(name: str | None) -> None:
+    """List the grades of the library, or show the limits of one."""
+    from converter_calc.reporting.text_tables import grade_text
+
+    click.echo(grade_text(name), nl=False)
+
+
+@click.command()
+@guarded
+def laws() -> None:
+    """List the slag-metal laws with source and range."""
+    from converter_calc.reporting.text_tables import law_text
+
+    click.echo(law_text(), nl=False)
+
+
+@click.command()
+@click.option("--port", type=click.IntRange(1, 65535), default=8501, show_default=True)
+@guarded
+def page(port: int) -> None:
+    """Open the page in a browser at 127.0.0.1; stop it with Ctrl-C."""
+    from converter_calc.page.launch import launch
+
+    launch(port)
+
+
+COMMANDS = (plan, predict, explain, sensitivity, grades, laws, page)

@@ -1,0 +1,7 @@
+"""Commands of the metallurgist: laws, lime, slag practices, fluxes."""
+
+from __future__ import annotations
+
+import click
+
+COMMANDS: tuple[click.Command, ...] = ()

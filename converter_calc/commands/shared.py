@@ -1,0 +1,76 @@
+"""What all commands share: arguments, errors as lines and exit codes, JSON out."""
+
+from __future__ import annotations
+
+import json
+import sys
+from collections.abc import Callable
+from functools import wraps
+from pathlib import Path
+from typing import Any
+
+import click
+
+from converter_calc.basis.errors import (
+    ConverterError,
+    InfeasibleError,
+)
+
+WRONG_INPUT = 2
+NO_ANSWER = 3
+
+HEAT = click.argument("heat", type=click.Path(path_type=Path))
+UNITS = click.option(
+    "--units",
+    type=click.Choice(["metric", "us"]),
+    default="metric",
+    help="Units shown: metric, or short tons, °F and scf.",
+)
+JSON = click.option(
+    "--json", "json_to", metavar="FILE|-", help="Write the result as JSON; - is standard output."
+)
+
+
+def guarded(command: Callable[..., None]) -> Callable[..., None]:
+    """Turn every error of ours into lines on standard error and an exit code."""
+
+    @wraps(command)
+    def run(*args: Any, **kwargs: Any) -> None:
+        try:
+            command(*args, **kwargs)
+        except InfeasibleError as error:
+            _tell_infeasible(error)
+            sys.exit(NO_ANSWER)
+        except ConverterError as error:
+            from converter_calc.basis.errors import ConvergenceError
+
+            click.echo(str(error), err=True)
+            sys.exit(NO_ANSWER if isinstance(error, ConvergenceError) else WRONG_INPUT)
+
+    return run
+
+
+def _tell_infeasible(error: InfeasibleError) -> None:
+    click.echo(str(error), err=True)
+    for free in error.frees:
+        click.echo(f"  it would be freed by: {free}", err=True)
+    if error.nearest:
+        near = ", ".join(f"{name} {x:.4g}" for name, x in error.nearest.items())
+        click.echo(f"  nearest reachable end point: {near}", err=True)
+
+
+def write_json(document: dict[str, Any], json_to: str | None) -> bool:
+    """Write JSON where asked; True if standard output is taken."""
+    if json_to is None:
+        return False
+    text = json.dumps(document, indent=1, allow_nan=False)
+    if json_to == "-":
+        click.echo(text)
+        return True
+    try:
+        Path(json_to).write_text(text + "\n", encoding="utf-8")
+    except OSError as error:
+        from converter_calc.basis.errors import Fault, InputError
+
+        raise InputError([Fault("--json", f"cannot write {json_to}: {error.strerror}")]) from error
+    return False

@@ -1,0 +1,7 @@
+"""Commands that learn from the heat log."""
+
+from __future__ import annotations
+
+import click
+
+COMMANDS: tuple[click.Command, ...] = ()

@@ -1,0 +1,1 @@
+"""How sure a plan is, and what the heat log teaches: spread, tuning, drift, proof."""

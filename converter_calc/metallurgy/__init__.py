@@ -1,0 +1,1 @@
+"""Tools of the metallurgist: laws, lime, slag practices and fluxes compared."""

@@ -1,0 +1,1 @@
+"""The heat register: plans, what became of them, and parameter sets, kept safely."""
