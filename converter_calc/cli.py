@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import click
 
-from converter_calc.commands import heat, log, phosphorus, sureness, tap, tuning
+from converter_calc.commands import heat, log, phosphorus, replaying, sureness, tap, tuning
 
 
 @click.group(context_settings={"help_option_names": ["-h", "--help"]})
@@ -13,6 +13,6 @@ def main() -> None:
     """Charge calculation for an oxygen converter, from first principles."""
 
 
-for module in (heat, phosphorus, tap, sureness, log, tuning):
+for module in (heat, phosphorus, tap, sureness, log, tuning, replaying):
     for command in module.COMMANDS:
         main.add_command(command)

@@ -13,6 +13,7 @@ import pytest
 from converter_calc.basis.elements import atomic_weight
 from converter_calc.basis.errors import DataError, InputError
 from converter_calc.data.tables import read_csv_rows, read_toml
+from converter_calc.laws import deoxidation
 from converter_calc.planning.grades import (
     Grade,
     additions,
@@ -64,6 +65,12 @@ def test_practice_rows_are_unique_sourced_and_inside_their_bounds() -> None:
         if row["group"] == "alloy_order":
             for name in row["value"].split(";"):
                 assert row["name"] in additions()[name].pct
+        elif row["group"] == "text":
+            assert row["value"] in {*row["description"].replace(":", ";").split("; "), ""} or (
+                row["value"] in deoxidation.laws()
+            )
+        elif not row["value"]:  # not given unless the shop gives it
+            assert float(row["min"]) < float(row["max"])
         else:
             assert float(row["min"]) <= float(row["value"]) <= float(row["max"]), row["name"]
 

@@ -174,10 +174,37 @@ def test_bad_link_is_told(chromium: Any, address: str) -> None:
 
 
 def test_why_opens_its_explanation(page: Any) -> None:
-    page.get_by_text("oxygen:", exact=False).last.click()
+    page.get_by_role("combobox", name="Why this number").click()
+    page.keyboard.type("oxygen", delay=20)
+    page.keyboard.press("Enter")
     pb.settled(page)
     assert page.get_by_text("Oxygen blown follows from the oxygen balance").is_visible()
     assert page.get_by_role("table", name="oxygen").get_by_text("oxidation of silicon").is_visible()
+
+
+def test_own_price_and_material_as_a_person_does_it(page: Any, tmp_path: Path) -> None:
+    """Trap: a grid of the browser drops the decimal comma: 30,5 becomes 305."""
+    page.get_by_text("Materials of the shop and prices").click()
+    pb.settled(page)
+    pb.write(page, "Price, currency/t", "410,5")
+    pb.write(page, "Moisture, %", "99")
+    assert page.get_by_text("99 is outside 0 to 30 %").first.is_visible()
+    assert pb.box(page, "Price, currency/t").input_value() == "410,5"
+    pb.write(page, "Moisture, %", "0,4")
+    pb.write(page, "Its name", "Rail ends")
+    page.get_by_role("button", name="Add it").click()
+    page.get_by_text("rail ends was added").wait_for(timeout=30000)
+    pb.write(page, "Mn", "0,9")
+    scrap = pb.figure_in(page, "scrap, all")
+    page.reload()
+    page.locator("table.cc-large").wait_for(timeout=30000)
+    pb.settled(page)
+    assert pb.figure_in(page, "scrap, all") == scrap
+    pb.show(page, "Files")
+    saved = tomllib.loads(download(page, "Heat file, complete", tmp_path).read_text("utf-8"))
+    assert saved["materials"]["heavy_scrap"]["price_per_t"] == 410.5
+    assert saved["materials"]["heavy_scrap"]["moisture_pct"] == 0.4
+    assert saved["materials"]["rail_ends"]["pct"]["Mn"] == 0.9
 
 
 def test_every_download_opens_again(page: Any, tmp_path: Path) -> None:

@@ -9,6 +9,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from converter_calc.balance.charge import ENTHALPY, TEMPERATURE
 from converter_calc.balance.closures import add_closures
 from converter_calc.balance.evaluation import evaluate
 from converter_calc.balance.newton import Reach, Unknowns
@@ -84,7 +85,7 @@ def first_guess(p: Problem, ask: Ask) -> Unknowns:
         charged = charged + np.nan_to_num(_array(p.values.get("scrap_kg", 0.0), n))
     guesses = {
         "metal_kg": np.maximum(charged, 0.05 * scale),
-        "slag_kg": 0.03 * hot_metal + 9.0 * silicon,
+        "slag_kg": 0.03 * hot_metal + 9.0 * silicon + _slag_back_kg(p, n),
         "f_Mn": np.full(n, 0.7),
         "f_P": np.full(n, 0.88),
         "lime_kg": 0.01 * hot_metal + 5.0 * silicon,
@@ -98,6 +99,15 @@ def first_guess(p: Problem, ask: Ask) -> Unknowns:
         "hot_metal_kg": hot_metal,
     }
     return {name: np.array(guesses[name], dtype=float) for name in ask.unknowns}
+
+
+def _slag_back_kg(p: Problem, n: int) -> Array:
+    """Slag that is in the vessel from before."""
+    back = np.nan_to_num(_array(p.values.get("retained_slag_kg", 0.0), n))
+    for key, kg in p.returned.items():
+        if key.startswith("slag_kept:") and not key.endswith((ENTHALPY, TEMPERATURE)):
+            back = back + _array(kg, n)
+    return back
 
 
 def _array(x: Num, n: int) -> Array:

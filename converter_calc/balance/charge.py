@@ -8,7 +8,7 @@ from __future__ import annotations
 
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, field
-from functools import cache
+from functools import cache, lru_cache
 
 from converter_calc.balance.materials import Material
 from converter_calc.basis.dual import Num
@@ -22,6 +22,8 @@ SLAG_OXIDES = (
     *("Cr2O3", "CaF2", "CaS", "Na2O", "K2O"),
 )
 WATER_AS_CHARGED = "H2O_liquid"
+#: Contents kept at hand for the next heat.
+CONTENTS_KEPT = 512
 
 
 @dataclass(frozen=True)
@@ -60,21 +62,34 @@ def charged_species_enthalpy_J_kg(species: str, temp_K: float) -> float:
 def content(material: Material) -> Content:
     """Elements, carbonate carbon and enthalpy of one kilogram of `material`.
 
-    Molten slag counts as a slag solution, everything else as the compounds it holds.
+    Molten slag counts as a slag solution, everything else as the compounds it holds. Equal
+    materials share one content.
     """
-    species = dict(material.species_kg)
-    if material.molten:
+    return _content(tuple(material.species_kg.items()), material.temp_K, molten=material.molten)
+
+
+@lru_cache(maxsize=CONTENTS_KEPT)
+def _content(parts: tuple[tuple[str, float], ...], temp_K: float, *, molten: bool) -> Content:
+    species = dict(parts)
+    if molten:
         oxides = {name: kg for name, kg in species.items() if name in SLAG_OXIDES}
-        enthalpy = float(slag_enthalpy(tuple(oxides)).enthalpy_J(oxides, material.temp_K))
+        enthalpy = float(slag_enthalpy(tuple(oxides)).enthalpy_J(oxides, temp_K))
         rest = {name: kg for name, kg in species.items() if name not in SLAG_OXIDES}
     else:
         enthalpy, rest = 0.0, species
     for name, kg in rest.items():
-        enthalpy += kg * charged_species_enthalpy_J_kg(name, material.temp_K)
+        enthalpy += kg * charged_species_enthalpy_J_kg(name, temp_K)
     carbon = sum(
         kg * mass_fractions(name)["C"] for name, kg in species.items() if name in CARBONATES
     )
-    return Content(elements_of(species), carbon, enthalpy, species, material.temp_K)
+    return Content(elements_of(species), carbon, enthalpy, species, temp_K)
+
+
+@lru_cache(maxsize=CONTENTS_KEPT)
+def dust_content(parts: tuple[tuple[str, float], ...]) -> Content:
+    """Elements of one kilogram of dust; its enthalpy is worked out where it leaves."""
+    species = dict(parts)
+    return Content(elements_of(species), 0.0, 0.0, species, 298.15)
 
 
 @cache
@@ -127,6 +142,32 @@ class Totals:
     def of(self, element: str) -> Num:
         """Kg of an element; 0.0 where none was charged."""
         return self.elements.get(element, 0.0)
+
+
+#: Items of a returned stream that are not species.
+ENTHALPY, TEMPERATURE = "enthalpy_J", "temp_C"
+
+
+def add_returned(totals: Totals, returned: Mapping[str, Num]) -> None:
+    """Add what comes back into the vessel: liquid slag, lime in it, metal in it.
+
+    returned : "<stream>:<item>" to array (n,); an item is a species [kg], `enthalpy_J` [J,
+    relative to the elements at 298.15 K] or `temp_C`. The composition may differ from heat to
+    heat, unlike that of a material.
+    """
+    for key, x in returned.items():
+        item = key.partition(":")[2]
+        if item == ENTHALPY:
+            totals.enthalpy_J = totals.enthalpy_J + x
+        elif item != TEMPERATURE:
+            for element, share in mass_fractions(item).items():
+                totals.add_element(element, x * share)
+
+
+def returned_elements(returned: Iterable[str]) -> set[str]:
+    """Elements that returned streams hold."""
+    items = {key.partition(":")[2] for key in returned} - {ENTHALPY, TEMPERATURE}
+    return {element for item in items for element in mass_fractions(item)}
 
 
 @cache

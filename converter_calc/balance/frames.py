@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import re
 from collections.abc import Callable, Iterable, Mapping
+from dataclasses import replace
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -17,6 +18,7 @@ from converter_calc.balance.schema import (
     nearest,
     number_names,
     parameters,
+    yield_parameter,
 )
 from converter_calc.basis.dual import Array
 from converter_calc.basis.elements import known_elements
@@ -39,11 +41,18 @@ def inputs_of_table(
     rows |= {row.name: row for row in map(element_parameter, known_elements())}
     for name in givens.materials:
         rows.setdefault(f"{name}_kg", material_parameter(name))
+    for name, material in givens.materials.items():
+        if material.kind == "scrap":
+            rows[f"{name}_yield_factor"] = yield_parameter(name)
     for name, number in defaults.items():
         if name not in rows:
             faults.append(Fault(name, f"unknown default{nearest(name, rows)}"))
         elif name.startswith("hm_"):
             givens.elements.setdefault(name[3:-4], float(number))
+        elif name.endswith("_yield_factor") and name not in parameters():
+            scrap = name.removesuffix("_yield_factor")
+            factor = float(number)
+            givens.materials[scrap] = replace(givens.materials[scrap], yield_factor=factor)
         elif name in parameters():
             givens.numbers.setdefault(name, float(number))
         else:

@@ -70,11 +70,14 @@ class Choices:
 class HeatTable:
     """n heats.
 
-    values : every numeric input by flat name, (n,), defaults filled in, NaN where not given.
+    values : every numeric input by flat name, (n,), defaults filled in, NaN where not given;
+    `<scrap>_yield_factor` only where it is not 1. Weights, hot metal temperature and oxygen are
+    as the instruments of the shop read them.
     hm_pct : hot metal analysis [mass %], iron by difference, 0 where an element is not given;
     the balance reads the analysis from here. masses_kg : materials whose mass is mentioned
-    [kg], NaN where a heat does not give it. materials : all at hand. grades, tap : tables as
-    the user wrote them.
+    [kg], NaN where a heat does not give it. materials : all at hand. grades, tap,
+    errors : tables as the user wrote them. returned : what comes back into the vessel from a
+    stage or heat before, see `charge.add_returned`; empty but for slag practices.
     """
 
     n: int
@@ -87,8 +90,10 @@ class HeatTable:
     grades: dict[str, Any] = field(default_factory=dict)
     grade: str | None = None
     tap: dict[str, Any] = field(default_factory=dict)
+    errors: dict[str, Any] = field(default_factory=dict)
     why: str = ""
     warnings: list[str] = field(default_factory=list)
+    returned: dict[str, Array] = field(default_factory=dict)
 
     def take(self, index: Any) -> HeatTable:
         """Some of the heats, by indices, slice or boolean mask."""
@@ -111,6 +116,7 @@ class HeatTable:
             values=pick(self.values),
             hm_pct=pick(self.hm_pct),
             masses_kg=pick(self.masses_kg),
+            returned=pick(self.returned),
         )
 
 
@@ -217,7 +223,7 @@ def _place(name: str) -> str:
 def _filled(array: Array | None, below: float, n: int) -> Array:
     """A column with its blank cells filled from below; one number where there is no column."""
     if array is None:
-        return np.broadcast_to(np.array([below]), (n,))
+        return np.array([below]) if n == 1 else np.broadcast_to(np.array([below]), (n,))
     return np.where(np.isnan(array), below, array) if np.isfinite(below) else array
 
 
@@ -229,6 +235,10 @@ def _all_values(n: int, givens: Givens, arrays: Mapping[str, Array]) -> dict[str
         if name.startswith("hm_"):
             below = givens.elements.get(name[3:-4], below)
         values[name] = _filled(arrays.get(name), below, n)
+    for scrap, material in givens.materials.items():
+        name = f"{scrap}_yield_factor"
+        if name in arrays or material.yield_factor != 1.0:
+            values[name] = _filled(arrays.get(name), material.yield_factor, n)
     return values
 
 
@@ -261,6 +271,7 @@ def _table(
         grades=dict(givens.tables.get("grades", {})),
         grade=grade,
         tap=dict(givens.tables.get("tap", {})),
+        errors=dict(givens.tables.get("errors", {})),
         why=givens.texts.get("why", ""),
         warnings=warnings,
     )

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 
+from converter_calc.balance.charge import Content, add_returned
 from converter_calc.balance.problem import Problem, given_totals
 from converter_calc.balance.state import State
 from converter_calc.basis import dual as ad
@@ -58,6 +59,7 @@ def given_charge(p: Problem, *, hot_metal: bool, oxygen: bool) -> State:
     s = State()
     s.totals = given_totals(p)
     s.charged_kg = dict(p.fixed)
+    add_returned(s.totals, p.returned)
     if "retained_slag_kg" in p.values:
         _add(p, s, "retained_slag", p.values["retained_slag_kg"])
     if hot_metal:
@@ -100,19 +102,19 @@ def _given_scrap(p: Problem, s: State) -> Num:
         scrap = _where_given(p, "scrap_kg", p.values["scrap_kg"], 0.0)
     if "scrap_share_pct" in p.values:
         share = p.values["scrap_share_pct"] * 0.01
-        by_share = s.hot_metal_kg * (share / (1.0 - share))
+        by_share = p.read("hot_metal", s.hot_metal_kg) * (share / (1.0 - share))
         scrap = _where_given(p, "scrap_share_pct", by_share, 0.0 if scrap is None else scrap)
     return scrap
 
 
 def _add_scrap(p: Problem, scrap: Num, s: State) -> None:
-    """Free scrap: as one mix, or filled up in the order of preference to each stock."""
+    """Free scrap as weighed: as one mix, or filled up in the order of preference to each stock."""
     plan = p.roles["scrap"]
     if plan is None:
         return
     s.scrap_free_kg = scrap
     if not isinstance(plan, list):
-        s.totals.add(scrap, plan)
+        _add_mix(p, scrap, plan, s)
         return
     below = 0.0
     for place, (name, stock) in enumerate(plan):
@@ -121,8 +123,20 @@ def _add_scrap(p: Problem, scrap: Num, s: State) -> None:
             part = ad.where(ad.value(part) > 0.0, part, 0.0)
         if place < len(plan) - 1:
             part = ad.where(ad.value(part) < stock, part, stock)
-        _add(p, s, name, part)
+        true = p.truth(name)
+        _add(p, s, name, part if true is None else part * true)
         below += stock
+
+
+def _add_mix(p: Problem, scrap: Num, mixed: Content, s: State) -> None:
+    """A mix by shares as weighed; where some of it is not what it weighs, kind by kind."""
+    true = {name: p.truth(name) for name in p.roles["scrap_mix"]}
+    if all(share is None for share in true.values()):
+        s.totals.add(scrap, mixed)
+        return
+    for name, share in p.roles["scrap_mix"].items():
+        kg = scrap * share
+        s.totals.add(kg if true[name] is None else kg * true[name], p.contents[name])
 
 
 def _add_oxygen(p: Problem, s: State) -> None:

@@ -42,7 +42,8 @@ class Material:
     """One material, ready to charge.
 
     species_kg : kg of each species per kg as weighed, sums to 1. temp_K : charging
-    temperature [K]. molten : True for a liquid slag. What is not given is None.
+    temperature [K]. molten : True for a liquid slag. yield_factor : share of scrap as weighed
+    that comes into the bath. What is not given is None.
     """
 
     name: str
@@ -53,6 +54,7 @@ class Material:
     price_per_t: float | None = None
     CO2_kg_per_t: float | None = None
     stock_kg: float | None = None
+    yield_factor: float = 1.0
     max_share_pct: float | None = None
     bulk_density_kg_per_m3: float | None = None
     description: str = ""
@@ -94,6 +96,8 @@ def compile_material(name: str, fields: Mapping[str, Any]) -> Material:
     kind = texts.get("kind") or "other"
     rest = texts.get("rest") or ("Fe" if kind == "scrap" and "rest" not in fields else "")
     pct = _take_analysis(fields.get("pct"), f"{place}.pct", faults, needed=not rest)
+    if "yield_factor" in fields and kind != "scrap":
+        faults.append(Fault(f"{place}.yield_factor", f'only a scrap has one, given for "{kind}"'))
     dirt = parse_shares(material_fields()["dirt_pct"].default)
     if "dirt_pct" in fields:
         dirt = _take_analysis(fields["dirt_pct"], f"{place}.dirt_pct", faults, needed=True) or dirt
@@ -121,6 +125,7 @@ def compile_material(name: str, fields: Mapping[str, Any]) -> Material:
         price_per_t=values.get("price_per_t"),
         CO2_kg_per_t=values.get("CO2_kg_per_t"),
         stock_kg=values.get("stock_kg"),
+        yield_factor=values["yield_factor"],
         max_share_pct=values.get("max_share_pct"),
         bulk_density_kg_per_m3=values.get("bulk_density_kg_per_m3"),
         description=texts.get("description", ""),

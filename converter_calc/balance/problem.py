@@ -12,7 +12,14 @@ from typing import Any
 
 import numpy as np
 
-from converter_calc.balance.charge import Content, Totals, content, mix_contents
+from converter_calc.balance.charge import (
+    Content,
+    Totals,
+    content,
+    dust_content,
+    mix_contents,
+    returned_elements,
+)
 from converter_calc.balance.heats import HeatTable
 from converter_calc.basis import dual as ad
 from converter_calc.basis.dual import Array, Num
@@ -40,9 +47,27 @@ PLACED = {"Fe", "C", "S", "Ca", "F", "O", "H", "N", "Ar"}
 STAYS_IN_STEEL = ("Cu", "Ni", "Mo", "Sn", "Co", "As", "Sb", "W", "Nb")
 
 
+#: Input that holds the error of the meter of each of these [% of the truth].
+METERS = {"hot_metal": "hot_metal_weight_error_pct", "oxygen": "oxygen_meter_error_pct"}
+
+
+def _true_share(values: Mapping[str, Num], error: str, factors: Iterable[str]) -> Num:
+    """Truth / reading, from an error [%] and factors; None where it is one."""
+    found: Num = None
+    for name in factors:
+        factor = values.get(name)
+        if factor is not None and not (isinstance(factor, float) and factor == 1.0):
+            found = factor if found is None else found * factor
+    pct = values.get(error)
+    if pct is not None and not (isinstance(pct, float) and pct == 0.0):
+        share = 1.0 / (1.0 + pct * 0.01)
+        found = share if found is None else found * share
+    return found
+
+
 @dataclass
 class Problem:
-    """Givens of n heats.
+    """Givens of n heats: truths, where a heat table holds what the instruments read.
 
     values : each numeric input by its flat name; absent where no heat gives it. masks : True
     where all heats give it, else a boolean array (n,). fixed : masses of materials that are
@@ -62,6 +87,7 @@ class Problem:
     dust: Content
     scale_kg: Any
     elements: tuple[str, ...] = ()
+    returned: dict[str, Num] = field(default_factory=dict)
     cache: dict[Any, Any] = field(default_factory=dict, repr=False)
 
     def get(self, name: str) -> Num:
@@ -75,6 +101,21 @@ class Problem:
             return law()
         mask = self.masks[name]
         return self.values[name] if mask is True else ad.where(mask, self.values[name], law())
+
+    def truth(self, reading: str) -> Num:
+        """What is true as a share of what is read: "hot_metal", "oxygen" or the name of a scrap.
+
+        None where the two are the same.
+        """
+        if reading in METERS:
+            return _true_share(self.values, METERS[reading], ())
+        factors = ("scrap_yield_factor", f"{reading}_yield_factor")
+        return _true_share(self.values, "scrap_weight_error_pct", factors)
+
+    def read(self, reading: str, true: Num) -> Num:
+        """What the shop's instrument shows where `true` is the truth; see `truth`."""
+        share = self.truth(reading)
+        return true if share is None else true / share
 
     def mask(self, name: str) -> Any:
         """Where a heat gives `name`: True, False or a boolean array."""
@@ -99,6 +140,7 @@ class Problem:
             masks=pick_all(self.masks),
             fixed=pick_all(self.fixed),
             hot_metal_pct=pick_all(self.hot_metal_pct),
+            returned=pick_all(self.returned),
             hot_metal_J_kg=pick(self.hot_metal_J_kg),
             scale_kg=pick(self.scale_kg),
             cache={},
@@ -151,10 +193,11 @@ def build_problem(heats: HeatTable, seeds: Iterable[str] = ()) -> Problem:
     """
     seeds = tuple(seeds)
     values, masks = _numbers(heats, seeds)
+    _correct(values)
     choices = heats.choices
     used = _used_materials(heats)
     contents = {name: content(heats.materials[name]) for name in used}
-    dust = Content(**_dust_parts(choices.dust_species))
+    dust = dust_content(tuple(choices.dust_species.items()))
     hot_metal_pct = {
         element: ad.seed(pct, f"hm_{element}_pct") if f"hm_{element}_pct" in seeds else _shrink(pct)
         for element, pct in heats.hm_pct.items()
@@ -169,9 +212,15 @@ def build_problem(heats: HeatTable, seeds: Iterable[str] = ()) -> Problem:
         name: ad.seed(_zero(kg), name + "_kg") if name + "_kg" in seeds else _shrink(_zero(kg))
         for name, kg in heats.masses_kg.items()
     }
+    for name, kg in fixed.items():
+        if heats.materials[name].kind == "scrap":
+            factors = ("scrap_yield_factor", f"{name}_yield_factor")
+            share = _true_share(values, "scrap_weight_error_pct", factors)
+            fixed[name] = kg if share is None else kg * share
     elements = set(hot_metal_pct) | set(dust.elements) | {"O", "N", "Ar", "Fe", "C"}
     for part in contents.values():
         elements.update(part.elements)
+    elements.update(returned_elements(heats.returned))
     _check_elements(elements)
     metal = MetalEnthalpy(tuple(hot_metal_pct)).evaluate_dual(values["hot_metal_temp_C"] + ZERO_C_K)
     heat = sum(hot_metal_pct[element] * 0.01 * metal[element] for element in hot_metal_pct)
@@ -194,23 +243,23 @@ def build_problem(heats: HeatTable, seeds: Iterable[str] = ()) -> Problem:
         dust=dust,
         scale_kg=_scale_kg(heats),
         elements=tuple(sorted(elements)),
+        returned={name: _shrink(x) for name, x in heats.returned.items()},
     )
+
+
+def _correct(values: dict[str, Num]) -> None:
+    """Put the truth in place of what thermometer, hot metal scale and oxygen meter read."""
+    for reading, name in (("hot_metal", "hot_metal_kg"), ("oxygen", "oxygen_Nm3")):
+        share = _true_share(values, METERS[reading], ())
+        if share is not None and name in values:
+            values[name] = values[name] * share
+    error = values["hot_metal_temp_error_C"]
+    if not (isinstance(error, float) and error == 0.0):
+        values["hot_metal_temp_C"] = values["hot_metal_temp_C"] - error
 
 
 def _zero(kg: Array) -> Array:
     return np.nan_to_num(kg, nan=0.0)
-
-
-def _dust_parts(species: Mapping[str, float]) -> dict[str, Any]:
-    from converter_calc.balance.charge import elements_of
-
-    return {
-        "elements": elements_of(species),
-        "carbonate_C": 0.0,
-        "enthalpy_J_kg": 0.0,
-        "species_kg": dict(species),
-        "temp_K": 298.15,
-    }
 
 
 def _used_materials(heats: HeatTable) -> list[str]:

@@ -7,7 +7,7 @@ default, bounds. Checks, defaults and column names are all built from it.
 from __future__ import annotations
 
 from collections.abc import Iterable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cache
 
 from converter_calc.basis.elements import known_elements
@@ -108,6 +108,12 @@ def material_parameter(material: str) -> Parameter:
         f"{material}_kg", "charge", f"{material}_kg", "number", "kg", "", 0.0, 1e6, (),
         f"{material} charged", "",
     )  # fmt: skip
+
+
+def yield_parameter(material: str) -> Parameter:
+    """The input that holds the yield factor of one scrap, a column of a table of heats."""
+    row = material_fields()["yield_factor"]
+    return replace(row, name=f"{material}_yield_factor", section=f"materials.{material}")
 
 
 def is_element_column(name: str) -> bool:

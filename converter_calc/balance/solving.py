@@ -17,6 +17,7 @@ import numpy as np
 from converter_calc.balance.asks import REACH, Ask, first_guess
 from converter_calc.balance.newton import Solved, Unknowns, dense, follow, solve
 from converter_calc.balance.problem import Problem
+from converter_calc.balance.single import solve_single
 from converter_calc.balance.system import Recorded, System
 from converter_calc.basis.dual import Array
 from converter_calc.basis.tolerances import (
@@ -41,6 +42,8 @@ EXTENSIVE = {
     "trim_kg": 0.05,
     "heat_loss_J": 1e6,
 }
+#: Times the first guess of the slag, in a last go for heats with slag from before.
+MORE_SLAG = 1.3
 #: Residual at which a heat of the sample is good enough to start others from.
 GOOD_START = 1e-7
 #: Standard deviations at which an input is cut off in the fit, so that an outlier among the
@@ -58,6 +61,10 @@ def solve_ask(p: Problem, ask: Ask, memory: Memory | None = None) -> Solved:
     """
     n = p.n
     first = first_guess(p, ask)
+    if n == 1:
+        found = solve_single(p, ask, first)
+        if found is not None:
+            return found
     guess = {name: x.copy() for name, x in first.items()}
     memory = Memory() if memory is None else memory
     system = System(p, ask, memory.recorded)
@@ -72,15 +79,25 @@ def solve_ask(p: Problem, ask: Ask, memory: Memory | None = None) -> Solved:
                 solved.unknowns[name][rows] = x[name]
             solved.residual[rows] = residual
         solved.converged = solved.residual <= POLISHED
-    # what stands badly starts again as it would alone, so that company makes no difference
-    for steps, afresh in ((QUICK_STEPS, False), (MOST_STEPS, True)):
+    _finish(system, solved, first)
+    return solved
+
+
+def _finish(system: System, solved: Solved, first: Unknowns) -> None:
+    """Newton for what is not solved; put into `solved`.
+
+    What stands badly starts again as it would alone, so that company makes no difference.
+    """
+    goes: list[tuple[int, float | None]] = [(QUICK_STEPS, None), (MOST_STEPS, 1.0)]
+    if system.p.returned:
+        goes.append((MOST_STEPS, MORE_SLAG))
+    for steps, more_slag in goes:
         left = np.flatnonzero(~solved.converged)
-        if afresh:
+        if more_slag is not None:
             for name, values in solved.unknowns.items():
-                values[left] = first[name][left]
+                values[left] = first[name][left] * (more_slag if name == "slag_kg" else 1.0)
         for begin in range(0, left.size, CHUNK):
             _solve_rows(system, solved, left[begin : begin + CHUNK], steps)
-    return solved
 
 
 def _fit_for(system: System, guess: Unknowns, fits: Fits) -> Fit | None:

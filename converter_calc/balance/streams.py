@@ -12,7 +12,7 @@ from typing import Any
 
 import numpy as np
 
-from converter_calc.balance.charge import Content, elements_of
+from converter_calc.balance.charge import ENTHALPY, TEMPERATURE, Content, elements_of
 from converter_calc.balance.heat import gas_enthalpies
 from converter_calc.balance.problem import Problem
 from converter_calc.balance.state import GASES, State
@@ -58,6 +58,7 @@ def _streams_in(p: Problem, s: State) -> Iterable[Stream]:
     yield Stream("hot_metal", "in", "metal", temp_C, heat, hot_metal)
     for name, kg in charged_masses(p, s).items():
         yield _material_stream(name, kg, p.contents[name])
+    yield from _returned_streams(p)
     temp_C = p.values["oxygen_temp_C"]
     yield gas_stream("oxygen", "in", temp_C, s.oxygen_kg)
     if s.stirring_kg:
@@ -65,11 +66,13 @@ def _streams_in(p: Problem, s: State) -> Iterable[Stream]:
 
 
 def charged_masses(p: Problem, s: State) -> dict[str, Num]:
-    """Mass of every material charged [kg], free scrap split into its kinds."""
+    """True mass of every material charged [kg], free scrap split into its kinds."""
     masses = {name: kg for name, kg in s.charged_kg.items() if name in p.contents}
     if isinstance(p.roles["scrap"], Content):
         for name, share in p.roles["scrap_mix"].items():
-            masses[name] = masses.get(name, 0.0) + s.scrap_free_kg * share
+            true = p.truth(name)
+            kg = s.scrap_free_kg * (share if true is None else share * true)
+            masses[name] = masses.get(name, 0.0) + kg
     return masses
 
 
@@ -77,6 +80,21 @@ def _material_stream(name: str, kg: Num, part: Content) -> Stream:
     kind = "slag" if name in ("carryover_slag", "retained_slag") else "solid"
     species = {formula: kg * share for formula, share in part.species_kg.items()}
     return Stream(name, "in", kind, part.temp_K - ZERO_C_K, kg * part.enthalpy_J_kg, species)
+
+
+#: Kind of a returned stream; any other is a solid.
+RETURNED_KIND = {"slag_kept": "slag", "metal_kept": "metal"}
+
+
+def _returned_streams(p: Problem) -> Iterable[Stream]:
+    """What comes back into the vessel from a stage or heat before."""
+    parts: dict[str, dict[str, Num]] = {}
+    for key, x in p.returned.items():
+        name, _, item = key.partition(":")
+        parts.setdefault(name, {})[item] = x
+    for name, items in parts.items():
+        heat, temp_C = items.pop(ENTHALPY), items.pop(TEMPERATURE)
+        yield Stream(name, "in", RETURNED_KIND.get(name, "solid"), temp_C, heat, items)
 
 
 def gas_stream(name: str, side: str, temp_C: Num, species_kg: Mapping[str, Num]) -> Stream:

@@ -20,7 +20,7 @@ from converter_calc.basis.tape import Program, Tape, steady_name
 from converter_calc.basis.tolerances import BLOCK, RECORDED_FROM
 
 Matrix = list[list[Any]]
-PARTS = ("values", "masks", "fixed", "hot_metal_pct")
+PARTS = ("values", "masks", "fixed", "hot_metal_pct", "returned")
 #: Programs by ask and by what does not differ between the heats.
 Recorded = dict[Any, Any]
 
@@ -46,6 +46,7 @@ def _record(p: Problem, ask: Ask) -> tuple[Tape, list[Any]]:
         masks=parts["masks"],
         fixed=parts["fixed"],
         hot_metal_pct=parts["hot_metal_pct"],
+        returned=parts["returned"],
         hot_metal_J_kg=trace("hot_metal_J_kg", p.hot_metal_J_kg),
         scale_kg=trace("scale_kg", p.scale_kg),
         cache={},

@@ -186,6 +186,18 @@ def steady_name(index: int) -> str:
     return f"steady:{index}"
 
 
+def needed_by(tape: Tape, outputs: Sequence[Any]) -> set[int]:
+    """Numbers of the operations and inputs of a tape that some outputs depend on."""
+    needed: set[int] = set()
+    stack = [x.index for x in outputs if isinstance(x, Trace)]
+    while stack:
+        index = stack.pop()
+        if index not in needed:
+            needed.add(index)
+            stack += [a for a in tape.nodes[index][1] if isinstance(a, int)]
+    return needed
+
+
 class Program:
     """A tape boiled down to what some outputs need, ready to run.
 
@@ -201,19 +213,9 @@ class Program:
         self._cut_registers: list[Any] = []
         self.outputs = [x.index if isinstance(x, Trace) else float(x) for x in outputs]
         self._is_trace = [isinstance(x, Trace) for x in outputs]
-        needed = self._needed(tape)
+        needed = needed_by(tape, outputs)
         self.inputs = [name for name, index in tape.names.items() if index in needed]
         self._compile(tape, needed)
-
-    def _needed(self, tape: Tape) -> set[int]:
-        needed: set[int] = set()
-        stack = [int(x) for x, traced in zip(self.outputs, self._is_trace, strict=True) if traced]
-        while stack:
-            index = stack.pop()
-            if index not in needed:
-                needed.add(index)
-                stack += [a for a in tape.nodes[index][1] if isinstance(a, int)]
-        return needed
 
     def _compile(self, tape: Tape, needed: set[int]) -> None:
         """Give each operation a register, used again once its quantity is no longer needed."""

@@ -7,7 +7,15 @@ from typing import Any
 
 import click
 
-from converter_calc.commands.shared import HEAT, JSON, UNITS, guarded, write_json
+from converter_calc.commands.shared import (
+    HEAT,
+    JSON,
+    TUNED,
+    UNITS,
+    guarded,
+    with_tuned,
+    write_json,
+)
 
 
 def _show(outcome: Any, json_to: str | None, units: str) -> None:
@@ -21,52 +29,57 @@ def _show(outcome: Any, json_to: str | None, units: str) -> None:
 @HEAT
 @JSON
 @UNITS
+@TUNED
 @guarded
-def plan(heat: Path, json_to: str | None, units: str) -> None:
+def plan(heat: Path, json_to: str | None, units: str, tuned: Path | None) -> None:
     """Solve for what is missing from the charge of HEAT and print the charge sheet."""
     from converter_calc.planning.plan import plan as plan_heat
 
-    _show(plan_heat(heat), json_to, units)
+    _show(plan_heat(with_tuned(heat, tuned)), json_to, units)
 
 
 @click.command()
 @HEAT
 @JSON
 @UNITS
+@TUNED
 @guarded
-def predict(heat: Path, json_to: str | None, units: str) -> None:
+def predict(heat: Path, json_to: str | None, units: str, tuned: Path | None) -> None:
     """Print where the blow of HEAT ends; its charge is complete."""
     from converter_calc.planning.plan import predict as predict_heat
 
-    _show(predict_heat(heat), json_to, units)
+    _show(predict_heat(with_tuned(heat, tuned)), json_to, units)
 
 
 @click.command()
 @HEAT
 @click.argument("quantity")
 @click.option("--predict", "as_predict", is_flag=True, help="The charge is complete.")
+@TUNED
 @guarded
-def explain(heat: Path, quantity: str, *, as_predict: bool) -> None:
+def explain(heat: Path, quantity: str, tuned: Path | None, *, as_predict: bool) -> None:
     """Show how QUANTITY of HEAT comes about: lime, oxygen, scrap, temperature, phosphorus ..."""
     from converter_calc.planning import plan as planning
     from converter_calc.planning.explain import check_quantity
     from converter_calc.planning.explain import explain as explain_heat
 
     check_quantity(quantity)
-    outcome = planning.predict(heat) if as_predict else planning.plan(heat)
+    asked = with_tuned(heat, tuned)
+    outcome = planning.predict(asked) if as_predict else planning.plan(asked)
     click.echo(explain_heat(outcome, quantity).text())
 
 
 @click.command()
 @HEAT
+@TUNED
 @guarded
-def sensitivity(heat: Path) -> None:
+def sensitivity(heat: Path, tuned: Path | None) -> None:
     """Show how end point and charge of a planned HEAT change with each input."""
     from converter_calc.planning.plan import plan as plan_heat
     from converter_calc.planning.sensitivities import sensitivities
     from converter_calc.reporting.text_tables import sensitivity_text
 
-    click.echo(sensitivity_text(sensitivities(plan_heat(heat))), nl=False)
+    click.echo(sensitivity_text(sensitivities(plan_heat(with_tuned(heat, tuned)))), nl=False)
 
 
 @click.command()

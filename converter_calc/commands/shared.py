@@ -26,6 +26,11 @@ UNITS = click.option(
     default="metric",
     help="Units shown: metric, or short tons, °F and scf.",
 )
+TUNED = click.option(
+    "--tuned",
+    type=click.Path(path_type=Path),
+    help="Parameters of the shop from its heat log (tune --out), in place of those of the file.",
+)
 JSON = click.option(
     "--json", "json_to", metavar="FILE|-", help="Write the result as JSON; - is standard output."
 )
@@ -48,6 +53,16 @@ def guarded(command: Callable[..., None]) -> Callable[..., None]:
             sys.exit(NO_ANSWER if isinstance(error, ConvergenceError) else WRONG_INPUT)
 
     return run
+
+
+def with_tuned(heat: Path, tuned: Path | None) -> Any:
+    """The heat as it stands, or with tuned parameters in place of the shop's."""
+    if tuned is None:
+        return heat
+    from converter_calc.learning.tuned import load_tuned
+    from converter_calc.planning.plan import as_heats
+
+    return load_tuned(tuned).apply(as_heats(heat))
 
 
 def _tell_infeasible(error: InfeasibleError) -> None:

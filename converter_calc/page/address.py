@@ -1,7 +1,8 @@
 """The state of the page in its address: what differs from the starting heat.
 
 Numbers and choices stand in it readably, by flat name. Tables (materials of the shop, own
-grades) are packed as zlib-compressed JSON in base64url (RFC 1950, RFC 4648).
+grades) are packed as zlib-compressed JSON in base64url (RFC 1950, RFC 4648). What is set in a
+view, as the ends of an axis, stands in it as `<view>.<field>`.
 """
 
 from __future__ import annotations
@@ -10,7 +11,7 @@ import base64
 import binascii
 import json
 import zlib
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping
 
 from converter_calc.balance.checks import check_document
 from converter_calc.balance.documents import check_depth
@@ -25,6 +26,18 @@ QUESTION, MIX, ORDER, TABLES, VIEW = "question", "scrap_mix", "scrap_order", "ta
 MOST_SIGNS = 6000
 MOST_UNPACKED_BYTES = 400_000
 MOST_TEXT = 300
+#: Fields of the views that have a place in the address; each view names its own.
+_VIEW_FIELDS: set[str] = set()
+
+
+def keep_in_address(view: str, fields: Iterable[str]) -> None:
+    """Give fields of a view a place in the address, as `<view>.<field>`."""
+    _VIEW_FIELDS.update(f"{view}.{name}" for name in fields)
+
+
+def view_texts(params: Mapping[str, str]) -> dict[str, str]:
+    """Fields of views in an address, by `<view>.<field>`; the view says what is wrong with one."""
+    return {k: text[:MOST_TEXT] for k, text in params.items() if k in _VIEW_FIELDS and text}
 
 
 def address_of(form: Form, start: Form) -> dict[str, str]:
@@ -59,7 +72,7 @@ def form_from(params: Mapping[str, str], start: Form) -> tuple[Form, list[Fault]
         except InputError as error:
             faults += [Fault(TABLES, f.line()) for f in error.faults]
     for name, text in params.items():
-        if name in (TABLES, VIEW):
+        if name in (TABLES, VIEW) or name in _VIEW_FIELDS:
             continue
         reason = _take(form, name, text)
         if reason:

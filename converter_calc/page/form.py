@@ -35,20 +35,12 @@ LEFT_OUT = {
     "trim": {"oxygen_Nm3"},
     "predict": {"aim_steel_kg"},
 }
-#: Sections that a shop file holds; the others belong to the heat.
-SHOP_SECTIONS = (
-    "name",
-    "materials",
-    "practice",
-    "choice",
-    "law",
-    "price",
-    "limit",
-    "grades",
-    "tap",
-)
+#: Sections that belong to the heat; all others are those of a shop file.
+HEAT_SECTIONS = ("heat_id", "why", "shop", "hot_metal", "aim", "charge", "pin")
 #: Tables that have no fields of their own; they are carried along as they came.
-CARRIED = ("materials", "grades", "tap")
+CARRIED = tuple(
+    row.name for row in parameters().values() if row.kind == "table" and not row.section
+)
 TEXTS = ("heat_id", "why", "name")
 
 
@@ -58,7 +50,8 @@ class Form:
 
     question : a key of QUESTIONS. fields : flat name -> text; names as in the parameter
     table, `hm_<El>_pct` and `<material>_kg`. mix : scrap -> share as text. order : scraps by
-    preference; in use where it is not empty. rest : tables without fields.
+    preference; in use where it is not empty. rest : tables without fields, and the materials
+    of the shop. wrong : place of a material's field -> text as typed and what is wrong with it.
     """
 
     question: str = "scrap"
@@ -66,6 +59,7 @@ class Form:
     mix: dict[str, str] = field(default_factory=dict)
     order: list[str] = field(default_factory=list)
     rest: dict[str, Any] = field(default_factory=dict)
+    wrong: dict[str, tuple[str, str]] = field(default_factory=dict)
 
     def copy(self) -> Form:
         """A copy that shares nothing that changes."""
@@ -142,6 +136,7 @@ def document_of(form: Form) -> dict[str, Any]:
             document.setdefault("practice", {})[key] = dict(table)
         else:
             document[key] = copy.deepcopy(table)
+    faults += [Fault(place, message) for place, (_, message) in form.wrong.items()]
     if faults:
         raise InputError(faults)
     return document
@@ -197,14 +192,14 @@ def _put_scraps(form: Form, choice: dict[str, Any], faults: list[Fault]) -> None
 
 def shop_part(document: Mapping[str, Any]) -> dict[str, Any]:
     """The sections of a document that a shop file holds; the question is the heat's."""
-    shop = {key: copy.deepcopy(document[key]) for key in SHOP_SECTIONS if key in document}
+    shop = {key: copy.deepcopy(x) for key, x in document.items() if key not in HEAT_SECTIONS}
     shop.get("choice", {}).pop("ask", None)
     return shop
 
 
 def heat_part(document: Mapping[str, Any]) -> dict[str, Any]:
     """The sections of a document that are the heat's own."""
-    heat = {key: copy.deepcopy(x) for key, x in document.items() if key not in SHOP_SECTIONS}
+    heat = {key: copy.deepcopy(x) for key, x in document.items() if key in HEAT_SECTIONS}
     if "ask" in document.get("choice", {}):
         heat["choice"] = {"ask": document["choice"]["ask"]}
     return heat

@@ -2,22 +2,28 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable
-
 import streamlit as st
 
 from converter_calc.balance.schema import allowed_texts, parameters, sections
 from converter_calc.basis.errors import ConverterError
+from converter_calc.page.fields import (
+    FIELD_PX,
+    SMALL_PX,
+    choice_field,
+    number_fields,
+    plain_name,
+    text_field,
+)
 from converter_calc.page.form import QUESTIONS, Form
-from converter_calc.page.markup import heading, note, put
-from converter_calc.page.numbers import field_fault, help_of, label_of, number_text, row_of
+from converter_calc.page.markup import heading, put
+from converter_calc.page.material_view import material_group
+from converter_calc.page.numbers import number_text
 from converter_calc.page.session import form, key_of, replace_form
 from converter_calc.planning.grades import grades
 from converter_calc.planning.outcome import at
 from converter_calc.planning.solving import complete_charge
 
 ELEMENTS = ("C", "Si", "Mn", "P", "S", "Ti", "V", "Cr")
-FIELD_PX, SMALL_PX, WIDE_PX = 136, 70, 288
 AIMS = ("aim_temp_C", "aim_C_pct", "aim_P_pct", "aim_S_pct", "aim_Mn_pct", "aim_basicity",
         "aim_MgO_pct")  # fmt: skip
 PRACTICE_FIRST = ("heat_loss_MJ_per_t", "heat_loss_MJ_per_min", "wait_min", "blow_min",
@@ -43,7 +49,8 @@ def all_fields() -> None:
     for title, group in (
         ("Scrap and materials", material_fields),
         ("Vessel and practice", practice_fields),
-        ("Limits and prices", limit_fields),
+        ("Limits of vessel, boxes and pot", limit_fields),
+        ("Materials of the shop and prices", material_group),
         ("Slag-metal laws", law_fields),
         ("Values pinned in place of the model's own", pin_fields),
     ):
@@ -138,9 +145,8 @@ def practice_fields() -> None:
 
 
 def limit_fields() -> None:
-    """What vessel, boxes and slag pot hold, and prices."""
-    for section in ("limit", "price"):
-        number_fields(row.name for row in sections()[section].values())
+    """What vessel, boxes and slag pot hold."""
+    number_fields(row.name for row in sections()["limit"].values())
 
 
 def law_fields() -> None:
@@ -152,49 +158,6 @@ def law_fields() -> None:
 def pin_fields() -> None:
     """Values that a published heat or a measurement gives."""
     number_fields(row.name for row in sections()["pin"].values())
-
-
-def number_fields(names: Iterable[str], width: int = FIELD_PX) -> None:
-    """Fields for numbers in rows that wrap; under them what is wrong with any."""
-    f, faults = form(), []
-    with st.container(horizontal=True):
-        for name in names:
-            key, row = key_of(name), row_of(name)
-            st.session_state.setdefault(key, f.fields.get(name, ""))
-            text = st.text_input(
-                label_of(name), key=key, help=help_of(name) if width > SMALL_PX else None,
-                placeholder=f"{row.default} if blank" if row.default else None, width=width,
-            )  # fmt: skip
-            f.fields[name] = text or ""
-            fault = field_fault(name, text) if text and text.strip() else None
-            if fault:
-                faults.append(f"{label_of(name)}: {fault}")
-    if faults:
-        put(note("fault", "Not taken, and nothing put in its place:", faults))
-
-
-def text_field(name: str, label: str) -> None:
-    """A field for a name; any text will do."""
-    f, key = form(), key_of(name)
-    st.session_state.setdefault(key, f.fields.get(name, ""))
-    f.fields[name] = st.text_input(label, key=key, max_chars=60, width=FIELD_PX) or ""
-
-
-def choice_field(name: str, label: str, options: list[str], width: int = WIDE_PX) -> None:
-    """A choice among names; one that is not at hand any more is kept and named wrong."""
-    f, key = form(), key_of(name)
-    given = f.fields.get(name, "") or row_of(name).default
-    if given not in options:
-        options = [given, *options]
-    st.session_state.setdefault(key, given)
-    f.fields[name] = st.selectbox(
-        label, options, key=key, width=width, format_func=lambda x: plain_name(x) or "none"
-    )
-
-
-def plain_name(name: str) -> str:
-    """A name as words."""
-    return name.replace("_", " ")
 
 
 def _take_recipe() -> None:

@@ -58,8 +58,10 @@ def launch(port: int = 8501) -> None:
 
 
 def _warm_up() -> None:
-    """Load and solve once, so that the first session does not wait for it."""
+    """Load, solve and record, so that the first session does not wait for it."""
+    from converter_calc.basis.tolerances import RECORDED_FROM_HEAT
     from converter_calc.page import session, shell  # noqa: F401
     from converter_calc.page.form import document_of
 
-    session.solve(document_of(session.start_form()), predict=False)
+    for _ in range(RECORDED_FROM_HEAT):
+        session.solve(document_of(session.start_form()), predict=False)

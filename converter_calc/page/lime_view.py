@@ -9,10 +9,19 @@ import streamlit as st
 
 from converter_calc.balance.heats import HeatTable
 from converter_calc.basis.errors import Fault, InputError
+from converter_calc.page.address import keep_in_address
 from converter_calc.page.balance_view import show_figure
 from converter_calc.page.markup import fault_texts, heading, note, put, rows_of, table_html
 from converter_calc.page.numbers import number_text, parse_number
-from converter_calc.page.session import answer, form, guarded, replace_form, theme, write_address
+from converter_calc.page.session import (
+    answer,
+    form,
+    guarded,
+    replace_form,
+    theme,
+    view_field,
+    write_address,
+)
 from converter_calc.planning.lime_sweeps import (
     LimeLines,
     lime_curve,
@@ -33,6 +42,7 @@ from converter_calc.reporting.sweep_charts import (
 
 POINTS = 25
 MOST_LIME_KG = 100_000.0
+keep_in_address("lime", ("from", "to"))
 
 
 def lime_view() -> None:
@@ -88,9 +98,9 @@ def _range(low: float, high: float) -> tuple[float, float]:
     """The range of lime: about the plan's at first, then as typed [kg]."""
     ends, faults = [], []
     with st.container(horizontal=True):
-        for label, about in (("Lime from, kg", low), ("Lime to, kg", high)):
+        for end, label, about in (("from", "Lime from, kg", low), ("to", "Lime to, kg", high)):
             usual = round(about, -2)
-            text = st.text_input(label, key=f"lime_{label}", placeholder=f"{usual:g}", width=150)
+            text = view_field("lime", end, label, placeholder=f"{usual:g}", width=150).strip()
             x = usual
             if text:
                 try:

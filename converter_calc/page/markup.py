@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Sequence
+from collections.abc import Collection, Iterable, Sequence
 from typing import Any
 
 import streamlit as st
@@ -50,26 +50,28 @@ def table_html(
     headings: Sequence[str],
     rows: Iterable[Sequence[Any]],
     *,
-    numeric: int = 1,
+    numeric: int | Collection[int] = 1,
     large: bool = False,
     parts: Iterable[int] = (),
     wide: bool = False,
 ) -> Markup:
-    """A table: the first cell of a row names it, cells from place `numeric` on are numbers.
+    """A table: the first cell of a row names it.
 
-    name : for those who cannot see the heading above. parts : numbers of the rows that are a
-    part of the row above. wide : many columns; scrolls sideways by itself on a small screen.
+    numeric : places of the cells that are numbers; from one place on where it is one. name :
+    for those who cannot see the heading above. parts : numbers of the rows that are a part of
+    the row above. wide : many columns; scrolls sideways by itself on a small screen.
     """
     inset = set(parts)
+    right = range(numeric, len(headings)) if isinstance(numeric, int) else numeric
     head = [
-        element("th", text, scope="col", **({"class_": "n"} if k >= numeric else {}))
+        element("th", text, scope="col", **({"class_": "n"} if k in right else {}))
         for k, text in enumerate(headings)
     ]
     body = []
     for number, row in enumerate(rows):
         cells = [element("th", row[0], scope="row")]
         cells += [
-            element("td", cell, **({"class_": "n"} if k >= numeric else {}))
+            element("td", cell, **({"class_": "n"} if k in right else {}))
             for k, cell in enumerate(row[1:], start=1)
         ]
         marks = {"class_": "cc-part"} if number in inset else {}
@@ -97,6 +99,15 @@ def rows_of(table: Any) -> Iterable[Any]:
 def heading(text: str) -> Markup:
     """A heading of the second order."""
     return element("h2", text, class_="cc")
+
+
+#: Figures of a formula as it is printed.
+_LOWERED = str.maketrans("0123456789", "₀₁₂₃₄₅₆₇₈₉")
+
+
+def formula(text: str) -> str:
+    """A chemical formula as it is printed: SiO₂ for SiO2."""
+    return text.translate(_LOWERED)
 
 
 def listed(texts: Iterable[str]) -> Markup:

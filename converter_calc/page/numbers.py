@@ -34,7 +34,8 @@ LABELS = {
     "wait_min": "Wait since last tap",
     "blow_min": "Blow",
 }
-UNITS = {"C": "°C", "mass %": "%", "Nm3": "Nm³", "currency/Nm3": "currency/Nm³", "m3": "m³"}
+UNITS = {"C": "°C", "mass %": "%", "Nm3": "Nm³", "currency/Nm3": "currency/Nm³", "m3": "m³",
+         "kg/m3": "kg/m³", "per t": "currency/t"}  # fmt: skip
 MOST_SIGNS = 40
 _SPACES = re.compile(r"[\s\u00a0\u202f]")
 _GROUPED = re.compile(r"[+-]?\d{1,3}([\s\u00a0\u202f]\d{3})+([.,]\d+)?")
@@ -127,7 +128,11 @@ def range_text(row: Parameter) -> str:
 
 def field_fault(name: str, text: str) -> str | None:
     """What is wrong with a filled field, or None."""
-    row = row_of(name)
+    return number_fault(row_of(name), text)
+
+
+def number_fault(row: Parameter, text: str) -> str | None:
+    """What is wrong with a text as a number of a row of the schema, or None."""
     try:
         number = parse_number(text)
     except ValueError as error:

@@ -4,13 +4,18 @@ from __future__ import annotations
 
 import streamlit as st
 
+from converter_calc.page.fields import WIDE_PX
 from converter_calc.page.inputs import all_fields, question_choice
 from converter_calc.page.markup import heading, put, rows_of, table_html
 from converter_calc.page.reasons import figures, reason_for
-from converter_calc.page.results import amount, answer_html, term_rows
+from converter_calc.page.results import amount, shown_answer, term_rows
 from converter_calc.page.session import Answer, answer, form, guarded, write_address
 from converter_calc.planning.outcome import Outcome
 from converter_calc.reporting import tables
+from converter_calc.reporting.html_sheet import element
+
+#: Key of the figure whose explanation is shown.
+WHY = "why_figure"
 
 
 def plan_view() -> None:
@@ -32,7 +37,7 @@ def _plan() -> None:
     if found.outcome is not None and form().question != "predict":
         st.session_state["cc_planned"] = found.outcome
     with right:
-        put(answer_html(found))
+        put(shown_answer(found))
         if found.outcome is not None:
             _reasons(found.outcome)
         _inputs_used(found)
@@ -42,21 +47,28 @@ def _plan() -> None:
 
 
 def _reasons(outcome: Outcome) -> None:
-    put(heading("Why this number"))
-    for figure in figures(outcome):
-        digits = 4 if figure.unit == "%" else None
-        shown = f"{figure.name}: {amount(figure.value, digits)} {figure.unit}"
-        opened = st.expander(shown, key=f"why_{figure.name}", on_change="rerun")
-        if opened.open:
-            with opened:
-                reason = reason_for(outcome, figure)
-                rows = term_rows((t.label, t.value, t.unit, t.source) for t in reason.terms)
-                headings: tuple[str, ...] = ("term", "value", "unit", "source")
-                if not any(row[3] for row in rows):
-                    rows, headings = [row[:3] for row in rows], headings[:3]
-                put(reason.reason)
-                if rows:
-                    put(table_html(figure.name, headings, rows, numeric=9))
+    """One figure at a time: to build all explanations would cost more than the plan."""
+    known = {figure.name: figure for figure in figures(outcome)}
+    if st.session_state.get(WHY) not in known:  # another heat may charge other materials
+        st.session_state[WHY] = None
+    name = st.selectbox(
+        "Why this number", list(known), key=WHY, index=None, width=WIDE_PX,
+        placeholder="Choose a figure of the recipe",
+    )  # fmt: skip
+    if name is None:
+        return
+    figure = known[name]
+    digits = 4 if figure.unit == "%" else None
+    reason = reason_for(outcome, figure)
+    rows = term_rows((t.label, t.value, t.unit, t.source) for t in reason.terms)
+    headings: tuple[str, ...] = ("term", "value", "unit", "source")
+    if not any(row[3] for row in rows):
+        rows, headings = [row[:3] for row in rows], headings[:3]
+    put(
+        heading(f"{figure.name}: {amount(figure.value, digits)} {figure.unit}"),
+        element("p", reason.reason),
+        table_html(figure.name, headings, rows, numeric={1}) if rows else "",
+    )
 
 
 def _inputs_used(found: Answer) -> None:
@@ -72,5 +84,7 @@ def _inputs_used(found: Answer) -> None:
                 for row in rows_of(table)
             ]  # fmt: skip
             put(
-                table_html("inputs used", ("field", "value", "unit", "what it is"), rows, numeric=9)
+                table_html(
+                    "inputs used", ("field", "value", "unit", "what it is"), rows, numeric={1}
+                )
             )

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
-from converter_calc.page.markup import rows_of
 from converter_calc.planning.explain import Explanation, Term, explain
 from converter_calc.planning.outcome import Outcome, at
 from converter_calc.reporting import tables
@@ -35,7 +34,7 @@ def figures(outcome: Outcome) -> list[Figure]:
         by_name |= {name.replace("_", " "): "coolant" for name in (choices.coolant, choices.fuel)}
     found = [
         Figure(row.name, row.amount, row.unit, by_name.get(row.name, ""))
-        for row in rows_of(tables.recipe_table(outcome))
+        for row in tables.recipe_rows(outcome)
     ]
     end = outcome.end_point()
     found.append(Figure("end temperature", float(at(end["temperature_C"], 0)), "°C", "temperature"))

@@ -6,7 +6,7 @@ from collections.abc import Iterable
 
 import numpy as np
 
-from converter_calc.page.markup import fault_texts, heading, note, rows_of, table_html
+from converter_calc.page.markup import fault_texts, formula, heading, note, table_html
 from converter_calc.page.session import Answer
 from converter_calc.planning.explain import number
 from converter_calc.planning.outcome import Outcome, at
@@ -38,6 +38,13 @@ def amount(x: float, digits: int | None = None) -> str:
     return f"{x:,.{places}f}"
 
 
+def shown_answer(found: Answer) -> Markup:
+    """The answer as HTML, made once for each answer."""
+    if not found.shown:
+        found.shown = answer_html(found)
+    return Markup(found.shown)
+
+
 def answer_html(found: Answer) -> Markup:
     """The whole answer, or what is in its way."""
     if found.outcome is None:
@@ -46,7 +53,7 @@ def answer_html(found: Answer) -> Markup:
     warnings = outcome.warnings(0)
     return joined(
         [
-            heading(f"Recipe of heat {outcome.heats.ids[0]}"),
+            heading(f"Recipe: {outcome.heats.ids[0]}"),
             recipe_html(outcome),
             _warned(warnings, "charge"),
             element(
@@ -89,7 +96,7 @@ def recipe_html(outcome: Outcome) -> Markup:
     rows: list[tuple[str, str, str]] = []
     scraps: list[tuple[str, str, str]] = []
     place = 0
-    for row in rows_of(tables.recipe_table(outcome)):
+    for row in tables.recipe_rows(outcome):
         unit = row.unit
         cells = (row.name, f"{amount(row.amount)} {unit}", f"{row.per_t:,.2f} {unit}/t")
         (scraps if _kind(outcome, row.name) == "scrap" else rows).append(cells)
@@ -120,7 +127,7 @@ def _kind(outcome: Outcome, shown: str) -> str:
 def end_point_html(outcome: Outcome) -> Markup:
     """Where the blow ends beside the aim."""
     rows = []
-    for row in rows_of(tables.end_point_table(outcome)):
+    for row in tables.end_point_rows(outcome):
         element_row = row.unit == "%"
         if element_row and abs(row.value) < 5e-5 and not np.isfinite(row.aim):
             continue
@@ -148,13 +155,13 @@ def _verdict(name: str, value: float, aim: float, unit: str) -> str:
 
 def slag_html(outcome: Outcome) -> Markup:
     """The liquid slag: weight and analysis."""
-    slag = tables.slag_table(outcome)
+    slag = tables.slag_rows(outcome)
     steel_t = float(at(outcome.state.steel_kg, 0)) * 1e-3
-    total = float(slag["kg"].sum())
+    total = sum(row.kg for row in slag)
     rows = [("liquid slag", f"{amount(total)} kg", f"{total / steel_t:.1f} kg/t")]
     rows += [
-        (row.oxide, f"{amount(row.kg)} kg", f"{row.pct:.2f} %")
-        for row in rows_of(slag)
+        (formula(row.oxide), f"{amount(row.kg)} kg", f"{row.pct:.2f} %")
+        for row in slag
         if row.pct >= 0.005
     ]
     iron = float(at(outcome.state.laws["T_Fe_pct"], 0))
@@ -176,4 +183,6 @@ def _warned(warnings: Iterable[dict[str, str]], place: str) -> Markup:
 
 def term_rows(terms: Iterable[tuple[str, float, str, str]]) -> list[tuple[str, ...]]:
     """Terms of an explanation as rows of text: label, value, unit, source."""
-    return [(label, number(x), unit, source) for label, x, unit, source in terms]
+    return [
+        (label, number(x), unit.replace("Nm3", "Nm³"), source) for label, x, unit, source in terms
+    ]

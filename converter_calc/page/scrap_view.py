@@ -12,10 +12,18 @@ import streamlit as st
 from converter_calc.balance.heats import HeatTable
 from converter_calc.balance.schema import parameters
 from converter_calc.basis.errors import Fault, InputError
+from converter_calc.page.address import keep_in_address
 from converter_calc.page.balance_view import show_figure
 from converter_calc.page.markup import fault_texts, heading, note, put, table_html
 from converter_calc.page.numbers import field_fault, label_of, number_text, parse_number
-from converter_calc.page.session import Answer, answer, guarded, theme
+from converter_calc.page.session import (
+    Answer,
+    answer,
+    guarded,
+    theme,
+    view_choice,
+    view_field,
+)
 from converter_calc.planning.sweeps import map_columns, scrap_ratio_map, today_point
 from converter_calc.reporting.exports import csv_text, xlsx_bytes
 from converter_calc.reporting.sweep_charts import scrap_map_figure, scrap_map_table, scrap_map_text
@@ -28,6 +36,8 @@ SHARES, TEMPERATURES = 15, 9
 SHARE_SPAN_PCT, TEMP_SPAN_C = 12.0, 90.0
 QUANTITIES = ("trim_kg", "oxygen_Nm3", "lime_kg", "slag_kg", "steel_kg", "yield_pct", "cost_per_t",
               "CO2_kg_per_t", "end_P_pct", "hot_metal_kg", "scrap_kg")  # fmt: skip
+keep_in_address("scrap", ["shown", "silicon", *(f"{name}.{end}" for end in ("from", "to")
+                for name in ("scrap_share_pct", "hot_metal_temp_C", "hm_Si_pct"))])  # fmt: skip
 
 
 def scrap_view() -> None:
@@ -58,12 +68,12 @@ def _scrap() -> None:
     columns = map_columns(found.heats)
     today = today_point(found.outcome) if found.outcome is not None else None
     with st.container(horizontal=True):
-        quantity = st.selectbox("Shown", QUANTITIES, key="scrap_quantity", width=300,
-                                format_func=lambda name: _title(columns, name))  # fmt: skip
-        silicon = st.selectbox("Silicon of the hot metal, %", axes["hm_Si_pct"],
-            index=1,
-                               key="scrap_silicon", width=200,
-                               format_func=lambda x: f"{x:.2f}")  # fmt: skip
+        quantity = view_choice("scrap", "shown", "Shown", QUANTITIES, width=300,
+                               format_func=lambda name: _title(columns, name))  # fmt: skip
+        low, middle, high = axes["hm_Si_pct"]
+        levels = {f"{x:.2f}": x for x in (middle, low, high)}
+        silicon = levels[view_choice("scrap", "silicon", "Silicon of the hot metal, %",
+                                     list(levels), width=200)]  # fmt: skip
     if not frame[quantity].notna().any():
         put(note("note", f"No {columns[quantity].label} to show; is a price or CO2 value missing?"))
     else:
@@ -97,8 +107,8 @@ def _axes(found: Answer) -> dict[str, list[float]]:
             ends = []
             for end, x in (("from", middle[name] - span), ("to", middle[name] + span)):
                 usual = min(max(round(x / step[name]) * step[name], row.low), row.high)
-                text = st.text_input(_end_label(name, end), key=f"scrap_{name}_{end}",
-                                     placeholder=f"{usual:g}", width=150)  # fmt: skip
+                text = view_field("scrap", f"{name}.{end}", _end_label(name, end),
+                                  placeholder=f"{usual:g}", width=150)  # fmt: skip
                 if text and field_fault(name, text):
                     faults.append(Fault(_end_label(name, end), str(field_fault(name, text))))
                     text = ""
@@ -138,12 +148,13 @@ def _map(heats: HeatTable, axes: dict[str, list[float]]) -> pd.DataFrame:
 
 def _grid_html(table: pd.DataFrame, name: str) -> Any:
     """Temperatures down, scrap shares across; every second share, so that it fits."""
-    shares = list(table.columns)[::2]
+    shares, values = list(table.columns)[::2], table.to_numpy()[:, ::2]
+    largest = np.nanmax(np.abs(values), initial=0.0)
+    digits = next((k for k, least in enumerate((1000.0, 100.0, 10.0, 1.0)) if largest >= least), 4)
     rows = [
-        (f"{temp:.0f} °C", *("–" if np.isnan(x) else f"{x:,.4g}" if abs(x) < 1e3 else f"{x:,.0f}"
-                             for x in row[::2]))
-        for temp, row in zip(table.index, table.to_numpy(), strict=True)
-    ]  # fmt: skip
+        (f"{temp:.0f} °C", *("–" if np.isnan(x) else f"{x:,.{digits}f}" for x in row))
+        for temp, row in zip(table.index, values, strict=True)
+    ]
     return table_html(name, ("hot metal", *(f"{share:.1f} %" for share in shares)), rows,
                       wide=True)  # fmt: skip
 

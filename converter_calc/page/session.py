@@ -1,13 +1,18 @@
-"""What one session keeps: the form, the solved heat, notes. Nothing is shared between sessions."""
+"""What one session keeps: the form, the solved heat, notes.
+
+Sessions share nothing but answers: the same fields, to the last digit, have the same answer.
+"""
 
 from __future__ import annotations
 
 import copy
 import json
 import logging
-from collections.abc import Callable, Mapping
+from collections import OrderedDict
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field
 from functools import cache
+from threading import Lock
 from typing import Any
 
 import streamlit as st
@@ -21,7 +26,7 @@ from converter_calc.basis.errors import (
     InputError,
 )
 from converter_calc.data.tables import read_toml
-from converter_calc.page.address import VIEW, address_of, form_from, too_long
+from converter_calc.page.address import VIEW, address_of, form_from, too_long, view_texts
 from converter_calc.page.form import Form, document_of, form_of
 from converter_calc.page.markup import fault_texts, note, put
 from converter_calc.planning.outcome import Outcome
@@ -34,7 +39,8 @@ class Answer:
     """What the fields give: a document and an outcome, or why there is none.
 
     infeasible : the error of a valid heat that has no answer. heats : the heat as a table of
-    one, where the input is right.
+    one, where the input is right. shown : its HTML, once made. Not to be changed otherwise:
+    sessions with the same fields share it.
     """
 
     document: dict[str, Any] | None = None
@@ -42,6 +48,32 @@ class Answer:
     outcome: Outcome | None = None
     faults: list[Fault] = field(default_factory=list)
     infeasible: InfeasibleError | None = None
+    shown: str = ""
+
+
+class Answers:
+    """Answers used last, by what was asked; shared by the sessions of a server."""
+
+    def __init__(self, most: int) -> None:
+        self._kept: OrderedDict[str, Answer] = OrderedDict()
+        self._lock = Lock()
+        self._most = most
+
+    def find(self, asked: str, solve_it: Callable[[], Answer]) -> Answer:
+        """The answer to a question, from the store or worked out now."""
+        with self._lock:
+            if asked in self._kept:
+                self._kept.move_to_end(asked)
+                return self._kept[asked]
+        found = solve_it()
+        with self._lock:
+            self._kept[asked] = found
+            while len(self._kept) > self._most:
+                self._kept.popitem(last=False)
+        return found
+
+
+ANSWERS = Answers(most=64)
 
 
 @cache
@@ -61,6 +93,7 @@ def form() -> Form:
         taken, faults = form_from(_params(), start_form())
         st.session_state["cc_form"] = taken
         st.session_state["cc_link_faults"] = faults
+        st.session_state["cc_views"] = view_texts(_params())
         st.session_state["cc_generation"] = 0
     found: Form = st.session_state["cc_form"]
     return found
@@ -93,11 +126,49 @@ def write_address() -> None:
     st.session_state["cc_address_too_long"] = too_long(found)
     if too_long(found):
         found = {}
+    found |= st.session_state["cc_views"]
     view = st.query_params.get(VIEW)
     if view is not None:
         found[VIEW] = view
     if found != _params():
         st.query_params.from_dict(found)
+
+
+def view_field(view: str, name: str, label: str, **options: Any) -> str:
+    """A text field of a view; what is typed is kept for the session and in the address.
+
+    view, name : as given to `keep_in_address`. options : of `st.text_input`.
+    """
+    key = f"{view}.{name}"
+    st.session_state.setdefault(key, st.session_state["cc_views"].get(key, ""))
+    text = st.text_input(label, key=key, **options) or ""
+    _keep(key, text.strip())
+    return text
+
+
+def view_choice(view: str, name: str, label: str, options: Sequence[str], **more: Any) -> str:
+    """A choice of a view by name, kept like `view_field`; the first where none was made.
+
+    A text of the address that is not among the options is told.
+    """
+    key = f"{view}.{name}"
+    kept = st.session_state["cc_views"].get(key, "")
+    if kept and kept not in options:
+        put(note("fault", f"{label}: {kept[:40]!r} of before is not there; {options[0]} is shown."))
+    if st.session_state.get(key) not in options:
+        st.session_state[key] = kept if kept in options else options[0]
+    found: str = st.selectbox(label, options, key=key, **more)
+    _keep(key, "" if found == options[0] else found)
+    return found
+
+
+def _keep(key: str, text: str) -> None:
+    kept = st.session_state["cc_views"]
+    if text != kept.get(key, ""):
+        kept.pop(key, None)
+        if text:
+            kept[key] = text
+        write_address()
 
 
 def answer() -> Answer:
@@ -106,13 +177,9 @@ def answer() -> Answer:
         document = document_of(form())
     except InputError as error:
         return Answer(faults=error.faults)
-    key = form().question + json.dumps(document, sort_keys=True, default=str)
-    kept = st.session_state.get("cc_answer")
-    if kept is None or kept[0] != key:
-        kept = key, solve(document, predict=form().question == "predict")
-        st.session_state["cc_answer"] = kept
-    found: Answer = kept[1]
-    return found
+    question = form().question
+    asked = question + json.dumps(document, sort_keys=True, default=str)
+    return ANSWERS.find(asked, lambda: solve(document, predict=question == "predict"))
 
 
 def solve(document: Mapping[str, Any], *, predict: bool) -> Answer:

@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import gc
+import math
+import time
 from functools import cache
 
 import streamlit as st
@@ -26,6 +28,10 @@ VIEWS = {
     "files": ("Files", files_view),
 }
 
+#: Time between two searches of everything for garbage, and when the last was [s].
+SEARCH_EVERY_S = 600.0
+_LAST_SEARCH = [-math.inf]
+
 
 def show_page() -> None:
     """The whole page, once a run of the session."""
@@ -36,18 +42,27 @@ def show_page() -> None:
     _settle()
 
 
-@cache
 def _settle() -> None:
-    """Once, after the first run: what many sessions at once would wait for.
+    """After each run of the whole page: what many sessions at once would wait for.
 
-    The server collects garbage after every run; what is loaded by now stays for good, and
-    looking through it each time cost 70 ms. The products are small: threads of BLAS that wait
-    for each other cost more than they save.
+    The server collects garbage after every run. What a session has loaded by now stays, so it
+    is left out of the search, which would take up to 70 ms each time; every ten minutes all of
+    it is looked through, for sessions that have gone.
     """
+    _one_thread()
+    now = time.monotonic()
+    if now - _LAST_SEARCH[0] > SEARCH_EVERY_S:
+        _LAST_SEARCH[0] = now
+        gc.unfreeze()
+        gc.collect()
+    gc.freeze()
+
+
+@cache
+def _one_thread() -> None:
+    """The products are small: threads of BLAS that wait for each other cost more than they save."""
     from threadpoolctl import threadpool_limits
 
-    gc.collect()
-    gc.freeze()
     threadpool_limits(limits=1, user_api="blas")
 
 

@@ -117,7 +117,10 @@ def _oxygen(outcome: Outcome, i: int) -> Explanation:
     purity = float(at(outcome.p.values["oxygen_purity_pct"], i))
     lines.append(Term("oxygen needed, pure", pure, "Nm3 O2"))
     lines.append(Term("purity of the oxygen", purity, "%"))
-    value = float(at(outcome.state.oxygen_Nm3, i))
+    value = float(at(outcome.oxygen_Nm3, i))
+    true = outcome.p.truth("oxygen")
+    if true is not None:
+        lines.append(Term("true volume as a share of the meter's", float(at(true, i)), ""))
     reason = "Oxygen blown follows from the oxygen balance of all products and solids charged:"
     return Explanation("oxygen", value, "Nm3", reason, lines)
 

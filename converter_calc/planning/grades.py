@@ -6,9 +6,10 @@ from converter_calc.planning.tramp import (
     tell_tramp,
     worst_element,
 )
+from converter_calc.tapping.additions import Addition, additions
 from converter_calc.tapping.aims import ConverterAim, Term, converter_aim, ladle_targets
 from converter_calc.tapping.grade_library import Grade, Limit, grade, grades, parse_user_grade
-from converter_calc.tapping.tap_practice import Addition, TapPractice, additions, tap_practice
+from converter_calc.tapping.tap_practice import TapPractice, tap_practice
 
 __all__ = [
     "Addition",

@@ -12,13 +12,18 @@ from converter_calc.planning.grades import (
     converter_aim,
     grade,
     largest_fitting_share,
-    tap_practice,
     tell_tramp,
     worst_element,
 )
+from converter_calc.planning.ladle import FIRST_DROP_K, practice_of, tap_temperature_for
 from converter_calc.planning.outcome import Caution, Outcome, spread
-from converter_calc.planning.solving import with_values
+from converter_calc.planning.solving import plan_groups, solve_heats, with_values
 from converter_calc.planning.verdicts import mark_infeasible, still_open
+
+#: Turns of planning and pouring, the change at which they end [K], and a drop beyond belief [K].
+TURNS = 6
+SETTLED_K = 1e-3
+MOST_DROP_K = 400.0
 
 
 def aim_of(heats: HeatTable) -> ConverterAim | None:
@@ -28,14 +33,44 @@ def aim_of(heats: HeatTable) -> ConverterAim | None:
     """
     if not heats.grade:
         return None
-    return converter_aim(grade(heats.grade, heats.grades), tap_practice(heats.tap))
+    return converter_aim(grade(heats.grade, heats.grades), practice_of(heats))
 
 
 def with_grade_aims(heats: HeatTable) -> HeatTable:
-    """The heats with each aim that is missing filled in from the grade."""
+    """The heats with each aim that is missing filled in from the grade, and the tap temperature
+    from the temperature wanted in the ladle.
+    """
     aim = aim_of(heats)
-    if aim is None:
+    if aim is not None:
+        heats = _with_contents(heats, aim)
+    return with_tap_temperature(heats)
+
+
+def with_tap_temperature(heats: HeatTable) -> HeatTable:
+    """The heats with a missing aim temperature derived from the one wanted in the ladle.
+
+    Each turn plans the heats and pours them; the ladle follows the tap nearly kelvin by kelvin.
+    """
+    wanted_C = practice_of(heats).ladle_temp_C if heats.tap else np.nan
+    missing = ~np.isfinite(heats.values["aim_temp_C"])
+    if not np.isfinite(wanted_C) or not missing.any():
         return heats
+    tap_C = np.where(missing, wanted_C + FIRST_DROP_K, heats.values["aim_temp_C"])
+    for _ in range(TURNS):
+        trial = with_values(heats, aim_temp_C=tap_C)
+        found = tap_C.copy()
+        for rows, group, ask in plan_groups(trial):
+            with np.errstate(all="ignore"):
+                better = tap_temperature_for(solve_heats(group, ask))
+            good = missing[rows] & np.isfinite(better) & (np.abs(better - wanted_C) < MOST_DROP_K)
+            found[rows[good]] = better[good]
+        moved, tap_C = np.max(np.abs(found - tap_C)), found
+        if moved < SETTLED_K:
+            break
+    return with_values(heats, aim_temp_C=tap_C)
+
+
+def _with_contents(heats: HeatTable, aim: ConverterAim) -> HeatTable:
     changes = {}
     for name, pct in (("aim_C_pct", aim.C_pct), ("aim_P_pct", aim.P_pct), ("aim_S_pct", aim.S_pct)):
         given = heats.values[name]
@@ -130,7 +165,7 @@ def grade_notes(outcome: Outcome) -> list[Caution]:
     aim = aim_of(outcome.heats)
     if aim is None:
         return []
-    found = [
+    found: list[Caution] = [
         Caution(
             "grade", "aim.grade", np.ones(1, dtype=bool), note.replace("{", "{{").replace("}", "}}")
         )

@@ -88,13 +88,14 @@ def lime_curve(heats: HeatTable, lime_kg: Any, laws: Sequence[str] | None = None
         raise InputError([Fault("lime_kg", f"must be 1 to {MOST_LIME_POINTS} masses")])
     if not (np.isfinite(lime).all() and (lime >= 0.0).all()):
         raise InputError([Fault("lime_kg", "must be 0 kg or more at every point")])
-    base = _phosphorus_free(heats)
+    only_one(heats)
+    base = phosphorus_free(heats)
     table = repeated(with_masses(base, {base.choices.lime: 0.0}), lime.size)
     table = with_masses(table, {base.choices.lime: lime})
     chosen = base.choices.laws["phosphorus"]
     parts: list[Any] = []
     for law in _in_order(base, laws):
-        group, ask = _asked(_with_law(table, law))
+        group, ask = asked(with_law(table, law))
         outcome = solve_heats(group, ask)
         parts.append(pd.DataFrame(_lime_columns(outcome, law, lime, chosen)))
     curve: pd.DataFrame = pd.concat(parts, ignore_index=True)
@@ -111,9 +112,10 @@ def lime_lines(heats: HeatTable, curve: pd.DataFrame | None = None) -> LimeLines
 
     Raises as `lime_curve`.
     """
-    base = _phosphorus_free(heats)
-    free = _lime_free(base)
-    _, ask = _asked(free)
+    only_one(heats)
+    base = phosphorus_free(heats)
+    free = lime_free(base)
+    _, ask = asked(free)
     chosen = base.choices.laws["phosphorus"]
     most = solve_heats(free, replace(ask, lime_rule="lime_limit"))
     dissolved = _lime_of(most)
@@ -149,11 +151,12 @@ def phosphorus_effects(heats: HeatTable) -> dict[str, pd.DataFrame]:
 
     Raises InputError as a plan does.
     """
-    base = _phosphorus_free(heats)
-    group, ask = _asked(base)
+    only_one(heats)
+    base = phosphorus_free(heats)
+    group, ask = asked(base)
     today = solve_heats(group, ask)
     held = with_values(
-        _lime_free(base), aim_basicity=float(np.ravel(today.state.basicity)[0]), aim_P_pct=np.nan
+        lime_free(base), aim_basicity=float(np.ravel(today.state.basicity)[0]), aim_P_pct=np.nan
     )
     row = parameters()["aim_temp_C"]
     temp = held.values["aim_temp_C"][0] + TEMPERATURE_STEPS_K
@@ -172,9 +175,8 @@ def phosphorus_effects(heats: HeatTable) -> dict[str, pd.DataFrame]:
     return {kind: _effect(name, x, table) for kind, (name, x, table) in tables.items()}
 
 
-def _phosphorus_free(heats: HeatTable) -> HeatTable:
-    """One heat with its aims complete and nothing pinned that the laws are to say."""
-    only_one(heats)
+def phosphorus_free(heats: HeatTable) -> HeatTable:
+    """Heats with their aims complete and nothing pinned that the laws are to say."""
     aims = with_grade_aims(heats)
     end = aims.values["pin_end_temp_C"]
     aim = np.where(np.isfinite(end), end, aims.values["aim_temp_C"])
@@ -183,20 +185,21 @@ def _phosphorus_free(heats: HeatTable) -> HeatTable:
     )
 
 
-def _lime_free(heats: HeatTable) -> HeatTable:
-    """The heat with lime, basicity and CaO let go."""
+def lime_free(heats: HeatTable) -> HeatTable:
+    """Heats with lime, basicity and CaO let go."""
     lime = heats.choices.lime
     free = with_masses(heats, {lime: np.nan}) if lime in heats.masses_kg else heats
     return with_values(free, pin_basicity=np.nan, pin_slag_CaO_pct=np.nan)
 
 
-def _asked(heats: HeatTable) -> tuple[HeatTable, Ask]:
+def asked(heats: HeatTable) -> tuple[HeatTable, Ask]:
     """The one question that all rows of a sweep pose."""
     ((_, group, ask),) = plan_groups(heats)
     return group, ask
 
 
-def _with_law(heats: HeatTable, law: str) -> HeatTable:
+def with_law(heats: HeatTable, law: str) -> HeatTable:
+    """Heats under another phosphorus law."""
     chosen = {**heats.choices.laws, "phosphorus": law}
     return replace(heats, choices=replace(heats.choices, laws=chosen))
 
@@ -283,7 +286,7 @@ def _lime_for_aim(free: HeatTable, ask: Ask, most: Outcome) -> float:
         excess_pct: Array = spread(outcome.steel_pct()["P"], outcome.n) - aim
         return excess_pct
 
-    return _crossing(free, excess, float(most.x["lime_kg"][0]))
+    return crossing(free, excess, float(most.x["lime_kg"][0]))
 
 
 def _saturated_from(base: HeatTable, scale_kg: float) -> float:
@@ -295,16 +298,21 @@ def _saturated_from(base: HeatTable, scale_kg: float) -> float:
     by_flux = ~np.isfinite(base.values["aim_MgO_pct"]).all()
     if by_flux and base.choices.magnesia_flux not in base.masses_kg:
         return np.nan
-    return _crossing(base, shortage, 2.0 * scale_kg)
+    return crossing(base, shortage, 2.0 * scale_kg)
 
 
-def _crossing(heats: HeatTable, margin: Callable[[Outcome], Array], most_kg: float) -> float:
-    """First lime between 0 and most_kg at which `margin` falls through zero; NaN if none."""
-    low, high = 0.0, most_kg
+def crossing(
+    heats: HeatTable, margin: Callable[[Outcome], Array], most_kg: float, least_kg: float = 0.0
+) -> float:
+    """First lime [kg] between the two at which `margin` falls through zero; NaN if none.
+
+    heats : one heat. margin : of an outcome of n limes, (n,).
+    """
+    low, high = least_kg, most_kg
     for _ in range(ROUNDS):
         lime = np.linspace(low, high, POINTS)
         table = repeated(with_masses(heats, {heats.choices.lime: 0.0}), POINTS)
-        group, ask = _asked(with_masses(table, {heats.choices.lime: lime}))
+        group, ask = asked(with_masses(table, {heats.choices.lime: lime}))
         outcome = solve_heats(group, ask)
         above = np.where(outcome.converged, margin(outcome), np.nan)
         falls = np.flatnonzero((above[:-1] > 0.0) & (above[1:] <= 0.0))
@@ -319,7 +327,7 @@ def _crossing(heats: HeatTable, margin: Callable[[Outcome], Array], most_kg: flo
 def _effect(name: str, x: Array, table: HeatTable) -> pd.DataFrame:
     import pandas as pd
 
-    group, ask = _asked(table)
+    group, ask = asked(table)
     outcome = solve_heats(group, ask)
     s, n = outcome.state, outcome.n
     numbers = {

@@ -120,7 +120,7 @@ def _let_temperature_go(outcome: Outcome, rows: Array, scrap_kg: Any) -> list[En
         heats,
         scrap_kg=scrap_kg,
         scrap_share_pct=np.nan,
-        hot_metal_kg=spread(outcome.state.hot_metal_kg, outcome.n)[rows],
+        hot_metal_kg=spread(outcome.hot_metal_kg, outcome.n)[rows],
     )
     return reachable(heats, replace(outcome.ask, heat="T_K", hot_metal=False))
 
@@ -218,7 +218,7 @@ def scrap_cap_kg(outcome: Outcome) -> tuple[Array, list[str]]:
     if volume > 0.0:
         caps.append((values["limit_scrap_box_m3"] / volume - fixed, "limit.scrap_box_m3"))
     if not outcome.ask.hot_metal:
-        room = values["limit_charge_kg"] - spread(outcome.state.hot_metal_kg, n) - fixed
+        room = values["limit_charge_kg"] - spread(outcome.hot_metal_kg, n) - fixed
         caps.append((room, "limit.charge_kg"))
     table = np.stack([np.where(np.isfinite(cap), cap, np.inf) for cap, _ in caps])
     first = table.argmin(axis=0)
@@ -352,7 +352,7 @@ def _weights(outcome: Outcome) -> None:
     """Vessel charge, scrap box and slag against their limits."""
     values, n = outcome.heats.values, outcome.n
     scrap = spread(outcome.kind_kg("scrap"), n)
-    charge = spread(outcome.state.hot_metal_kg, n) + scrap
+    charge = spread(outcome.hot_metal_kg, n) + scrap
     volume = np.zeros(n)
     for name, kg in outcome.charged_kg.items():
         material = outcome.heats.materials[name]

@@ -127,8 +127,22 @@ class Outcome:
 
     @cached_property
     def charged_kg(self) -> dict[str, Num]:
-        """Mass of each material charged [kg]."""
-        return charged_masses(self.p, self.state)
+        """Mass of each material charged as the shop's scales show it [kg]."""
+        materials = self.heats.materials
+        return {
+            name: self.p.read(name, kg) if materials[name].kind == "scrap" else kg
+            for name, kg in charged_masses(self.p, self.state).items()
+        }
+
+    @property
+    def hot_metal_kg(self) -> Num:
+        """Hot metal charged as the shop's scale shows it [kg]."""
+        return self.p.read("hot_metal", self.state.hot_metal_kg)
+
+    @property
+    def oxygen_Nm3(self) -> Num:
+        """Oxygen blown as the shop's meter shows it [Nm3]."""
+        return self.p.read("oxygen", self.state.oxygen_Nm3)
 
     def kind_kg(self, kind: str) -> Num:
         """Mass of all materials of a kind charged [kg]."""
@@ -138,13 +152,16 @@ class Outcome:
         )
 
     def recipe(self) -> dict[str, Num]:
-        """What to charge [kg] and to blow [Nm3]; what comes along unasked is left out."""
+        """What to charge [kg] and to blow [Nm3], as the shop's instruments show it.
+
+        What comes along unasked is left out.
+        """
         unasked = ("carryover_slag", "retained_slag", "lining")
         masses = {name: kg for name, kg in self.charged_kg.items() if name not in unasked}
-        recipe: dict[str, Num] = {"hot_metal_kg": self.state.hot_metal_kg}
+        recipe: dict[str, Num] = {"hot_metal_kg": self.hot_metal_kg}
         recipe["scrap_total_kg"] = self.kind_kg("scrap")
         recipe |= {name + "_kg": kg for name, kg in masses.items()}
-        recipe["oxygen_Nm3"] = self.state.oxygen_Nm3
+        recipe["oxygen_Nm3"] = self.oxygen_Nm3
         if self.state.stirring_kg:
             recipe["stirring_gas_Nm3"] = self.p.values["stirring_gas_Nm3"]
         return recipe
@@ -195,8 +212,8 @@ class Outcome:
             if name + "_kg" in kg
         ]
         priced += [
-            (self.state.hot_metal_kg * 1e-3, self.p.get("price_hot_metal_per_t")),
-            (self.state.oxygen_Nm3, self.p.get("price_oxygen_per_Nm3")),
+            (self.hot_metal_kg * 1e-3, self.p.get("price_hot_metal_per_t")),
+            (self.oxygen_Nm3, self.p.get("price_oxygen_per_Nm3")),
         ]
         for amount, price in priced:
             if price is not None and np.all(np.isfinite(price)):
@@ -215,7 +232,7 @@ class Outcome:
             **{f"end_{el}_pct": pct for el, pct in self.steel_pct().items() if el != "O"},
             "end_O_ppm": s.O_pct * 1e4,
             "steel_kg": s.steel_kg,
-            "yield_pct": 100.0 * s.steel_kg / (s.hot_metal_kg + self.kind_kg("scrap")),
+            "yield_pct": 100.0 * s.steel_kg / (self.hot_metal_kg + self.kind_kg("scrap")),
             "slag_kg": s.slag_kg,
             **{f"slag_{name}_pct": pct for name, pct in self.slag_pct().items()},
             "slag_T_Fe_pct": s.laws["T_Fe_pct"],

@@ -6,6 +6,7 @@ dx/dg = -(dR/dx)^-1 dR/dg. Both factors come from the same residuals, exactly.
 
 from __future__ import annotations
 
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -13,8 +14,8 @@ import numpy as np
 
 from converter_calc.balance.asks import Ask, evaluate_ask
 from converter_calc.balance.heats import HeatTable
-from converter_calc.balance.newton import dense
-from converter_calc.balance.problem import build_problem
+from converter_calc.balance.newton import dense, residual_norm
+from converter_calc.balance.problem import Problem, build_problem
 from converter_calc.balance.state import State
 from converter_calc.basis import dual as ad
 from converter_calc.basis.dual import Array, Num
@@ -69,17 +70,40 @@ def _steps(heats: HeatTable, *, aims: bool) -> dict[str, tuple[float, str]]:
     return steps
 
 
-def _outputs(state: State, x: dict[str, Num]) -> dict[str, Num]:
+def _outputs(p: Problem, state: State, x: Mapping[str, Num]) -> dict[str, Num]:
     found = {
         "end_temp_C": state.T_K,
         "end_C_pct": state.C_pct,
         "end_P_pct": state.metal_species_kg["P"] * (100.0 / state.metal_kg),
         "steel_kg": state.steel_kg,
     }
-    for name in ("scrap_kg", "trim_kg", "lime_kg", "flux_kg", "oxygen_Nm3", "hot_metal_kg"):
+    for name in ("scrap_kg", "trim_kg", "lime_kg", "flux_kg"):
         if name in x:
             found[name] = x[name]
+    for name, meter in (("oxygen_Nm3", "oxygen"), ("hot_metal_kg", "hot_metal")):
+        if name in x:
+            found[name] = p.read(meter, x[name])
     return found
+
+
+#: Quantities of a solved state, from the givens, the state and the unknowns.
+Outputs = Callable[[Problem, State, Mapping[str, Num]], Mapping[str, Num]]
+
+
+@dataclass(frozen=True)
+class Response:
+    """How n solved heats answer to their inputs.
+
+    values : each quantity, (n,). slopes : its total derivative by each input, (n, k).
+    unknowns : unknowns after one more Newton step, (n,) each. unknown_slopes : their
+    derivatives, (n, unknowns, k). residual : largest residual before that step, (n,).
+    """
+
+    values: dict[str, Array]
+    slopes: dict[str, Array]
+    unknowns: dict[str, Array]
+    unknown_slopes: Array
+    residual: Array
 
 
 def derivatives(
@@ -92,24 +116,70 @@ def derivatives(
     heats, ask, x : solved heats. names : flat names of numeric inputs, `hm_<El>_pct` or
     `<material>_kg`.
     """
-    p = build_problem(heats, seeds=names)
+    found = response(build_problem(heats, seeds=names), ask, x, names, _outputs)
+    return {
+        label: {name: slopes[:, c] for c, name in enumerate(names)}
+        for label, slopes in found.slopes.items()
+    }
+
+
+def response(
+    p: Problem, ask: Ask, x: Mapping[str, Array], names: Sequence[str], outputs: Outputs
+) -> Response:
+    """Answer of solved heats to their inputs, by the theorem of the implicit function.
+
+    Parameters
+    ----------
+    p : givens, built with `names` as seeds. ask, x : question and its unknowns, solved.
+    names : inputs. outputs : quantities wanted. Heats whose Jacobian is singular come out as
+    NaN.
+    """
+    n = p.n
     seeds: dict[str, Any] = {name: ad.seed(values, "x:" + name) for name, values in x.items()}
     state = evaluate_ask(p, ask, seeds)
     residuals = [state.residuals[name] for name in ask.residuals]
     unknown = ["x:" + name for name in ask.unknowns]
-    J = dense([[ad.slope(r, name) for name in unknown] for r in residuals], heats.n)
-    G = np.zeros((heats.n, len(residuals), len(names)))
+    right = np.zeros((n, len(residuals), 1 + len(names)))
     for r, residual in enumerate(residuals):
+        right[:, r, 0] = ad.value(residual)
         for c, name in enumerate(names):
-            G[:, r, c] = ad.slope(residual, name)
-    dx = -np.linalg.solve(J, G)
-    found: dict[str, dict[str, Array]] = {}
-    for label, output in _outputs(state, seeds).items():
-        by_x = np.zeros((heats.n, len(unknown)))
+            right[:, r, 1 + c] = ad.slope(residual, name)
+    J = dense([[ad.slope(r, name) for name in unknown] for r in residuals], n)
+    moves = -_solved(J, right)
+    dx = moves[:, :, 1:]
+    values, slopes = {}, {}
+    for label, output in outputs(p, state, seeds).items():
+        by_x = np.zeros((n, len(unknown)))
         for c, name in enumerate(unknown):
             by_x[:, c] = ad.slope(output, name)
-        total = np.einsum("nu,nug->ng", by_x, dx)
-        found[label] = {name: total[:, c] + ad.slope(output, name) for c, name in enumerate(names)}
+        total = np.matmul(by_x[:, None, :], dx)[:, 0, :]
+        for c, name in enumerate(names):
+            total[:, c] += ad.slope(output, name)
+        values[label] = np.array(np.broadcast_to(ad.value(output), (n,)), dtype=float)
+        slopes[label] = total
+    return Response(
+        values,
+        slopes,
+        {name: x[name] + moves[:, c, 0] for c, name in enumerate(ask.unknowns)},
+        dx,
+        residual_norm([ad.value(r) for r in residuals], (n,)),
+    )
+
+
+def _solved(J: Array, right: Array) -> Array:
+    """J^-1 right; NaN for a heat whose matrix is singular or not finite."""
+    bad = ~(np.isfinite(J).all(axis=(1, 2)) & np.isfinite(right).all(axis=(1, 2)))
+    if bad.any():
+        J = J.copy()
+        J[bad] = np.eye(J.shape[1])
+    try:
+        found: Array = np.linalg.solve(J, right)
+    except np.linalg.LinAlgError:
+        singular = np.linalg.matrix_rank(J) < J.shape[1]
+        bad |= singular
+        J = np.where(singular[:, None, None], np.eye(J.shape[1]), J)
+        found = np.linalg.solve(J, right)
+    found[bad] = np.nan
     return found
 
 
@@ -127,7 +197,7 @@ def sensitivities(outcome: Outcome) -> dict[str, list[Sensitivity]]:
         charged = complete_charge(outcome)
     else:
         charged = outcome.heats
-    heats = with_values(charged, oxygen_Nm3=outcome.state.oxygen_Nm3)
+    heats = with_values(charged, oxygen_Nm3=outcome.oxygen_Nm3)
     ask = Ask(end="root_C", heat="T_K")
     solved = solve_heats(heats, ask)
     found["predict"] = _one(heats, ask, solved.x, aims=False)

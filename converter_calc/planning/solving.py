@@ -234,14 +234,13 @@ def solve_in_parts(
 
 def complete_charge(outcome: Outcome) -> HeatTable:
     """The planned heat as a complete charge, ready to predict: masses and oxygen given."""
-    state = outcome.state
     unasked = ("carryover_slag", "retained_slag", "lining")
     masses = {name: kg for name, kg in outcome.charged_kg.items() if name not in unasked}
     heats = with_masses(outcome.heats, masses)
     return with_values(
         heats,
-        hot_metal_kg=state.hot_metal_kg,
-        oxygen_Nm3=state.oxygen_Nm3,
+        hot_metal_kg=outcome.hot_metal_kg,
+        oxygen_Nm3=outcome.oxygen_Nm3,
         scrap_kg=np.nan,
         scrap_share_pct=np.nan,
     )

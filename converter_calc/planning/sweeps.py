@@ -126,7 +126,7 @@ def map_columns(heats: HeatTable) -> dict[str, Column]:
 
 def today_point(outcome: Outcome, index: int = 0) -> dict[str, float]:
     """Where a planned heat lies on the map: scrap share [mass %], temperature [C], Si [mass %]."""
-    scrap, hot_metal = outcome.kind_kg("scrap"), outcome.state.hot_metal_kg
+    scrap, hot_metal = outcome.kind_kg("scrap"), outcome.hot_metal_kg
     point = {
         "scrap_share_pct": 100.0 * scrap / (scrap + hot_metal),
         "hot_metal_temp_C": outcome.heats.values["hot_metal_temp_C"],
@@ -238,17 +238,17 @@ def _map_numbers(outcome: Outcome) -> dict[str, Any]:
     gas, making = (x * 1e3 / s.steel_kg for x in (gas_CO2_kg(outcome), materials_CO2_kg(outcome)))
     coolant, fuel = (spread(kg.get(name, 0.0), n) for name in (choices.coolant, choices.fuel))
     numbers: dict[str, Num] = {
-        "hot_metal_kg": s.hot_metal_kg,
+        "hot_metal_kg": outcome.hot_metal_kg,
         "scrap_kg": scrap,
         "coolant_kg": coolant,
         "fuel_kg": fuel,
         "trim_kg": coolant - fuel,
-        "oxygen_Nm3": s.oxygen_Nm3,
+        "oxygen_Nm3": outcome.oxygen_Nm3,
         "lime_kg": kg.get(choices.lime, 0.0),
         "flux_kg": kg.get(choices.magnesia_flux, 0.0),
         "slag_kg": s.slag_kg,
         "steel_kg": s.steel_kg,
-        "yield_pct": 100.0 * s.steel_kg / (s.hot_metal_kg + scrap),
+        "yield_pct": 100.0 * s.steel_kg / (outcome.hot_metal_kg + scrap),
         "end_P_pct": outcome.steel_pct().get("P", 0.0),
         "cost_per_t": outcome.cost() if _any_price(outcome) else np.nan,
         "CO2_gas_kg_per_t": gas,

@@ -11,29 +11,16 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from converter_calc.basis.inert_text import CONTROL, neutralised
 from converter_calc.planning.outcome import Outcome
 from converter_calc.reporting import tables
 
 if TYPE_CHECKING:
     import pandas as pd
 
-#: First signs at which spreadsheets start a formula: OWASP, CSV Injection (from memory).
-FORMULA_SIGNS = ("=", "+", "-", "@", "\t", "\r", "\n", "＝", "＋", "－", "＠")
 #: Limits of the XLSX format: ECMA-376 and the makers' published limits (from memory).
 MOST_CELL_SIGNS, MOST_SHEET_SIGNS = 32767, 31
-_CONTROL = re.compile(r"[\x00-\x08\x0b\x0c\x0e-\x1f\ufffe\uffff]|[\ud800-\udfff]")
 _NOT_IN_SHEET = re.compile(r"[\[\]:*?/\\']")
-
-
-def neutralised(cell: Any) -> Any:
-    """A text that starts like a formula gets an apostrophe before it; numbers stay numbers.
-
-    Control characters, which neither XML nor CSV readers take well, are left out of texts.
-    """
-    if not isinstance(cell, str):
-        return cell
-    text = _CONTROL.sub("", cell)
-    return "'" + text if text.startswith(FORMULA_SIGNS) else text
 
 
 def plain(cell: Any) -> Any:
@@ -126,7 +113,7 @@ def _put(sheet: Any, row: int, column: int, cell: Any) -> None:
 
 def _sheet_name(title: str, taken: set[str]) -> str:
     """A name that the format takes, told apart from those before it."""
-    name = _NOT_IN_SHEET.sub(" ", _CONTROL.sub("", title)).strip()[:MOST_SHEET_SIGNS] or "table"
+    name = _NOT_IN_SHEET.sub(" ", CONTROL.sub("", title)).strip()[:MOST_SHEET_SIGNS] or "table"
     base, count = name, 1
     while name.casefold() in taken:
         count += 1

@@ -6,13 +6,13 @@ Each is a DataFrame read off an Outcome: what the pictures show, as numbers.
 from __future__ import annotations
 
 from collections.abc import Mapping
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, NamedTuple
 
 import numpy as np
 
 from converter_calc.balance.charge import elements_of
 from converter_calc.balance.heats import HeatTable
-from converter_calc.balance.schema import parameters
+from converter_calc.balance.schema import parameters, yield_parameter
 from converter_calc.basis.units import MJ, ZERO_C_K
 from converter_calc.planning.heat_terms import heat_terms
 from converter_calc.planning.outcome import Outcome, at
@@ -63,10 +63,34 @@ AS_TAKEN = {
 }
 
 
-def recipe_table(outcome: Outcome, index: int = 0) -> pd.DataFrame:
-    """What to charge and blow: name, amount, unit (kg or Nm³), per_t [unit/t steel]."""
-    import pandas as pd
+class RecipeRow(NamedTuple):
+    """One line of the recipe: amount in `unit` (kg or Nm³), per_t [unit/t steel]."""
 
+    name: str
+    amount: float
+    unit: str
+    per_t: float
+
+
+class EndPointRow(NamedTuple):
+    """One line of the end point; aim is NaN where there is none."""
+
+    name: str
+    value: float
+    unit: str
+    aim: float
+
+
+class SlagRow(NamedTuple):
+    """One oxide of the liquid slag [kg, mass %]."""
+
+    oxide: str
+    kg: float
+    pct: float
+
+
+def recipe_rows(outcome: Outcome, index: int = 0) -> list[RecipeRow]:
+    """What to charge and blow; what is not charged is left out."""
     steel_t = float(at(outcome.state.steel_kg, index)) * 1e-3
     rows = []
     for key, x in outcome.recipe().items():
@@ -75,14 +99,19 @@ def recipe_table(outcome: Outcome, index: int = 0) -> pd.DataFrame:
             continue
         name, unit = key.rsplit("_", 1)
         shown = "scrap, all" if key == "scrap_total_kg" else name.replace("_", " ")
-        rows.append((shown, amount, "Nm³" if unit == "Nm3" else unit, amount / steel_t))
-    return pd.DataFrame(rows, columns=["name", "amount", "unit", "per_t"])
+        rows.append(RecipeRow(shown, amount, "Nm³" if unit == "Nm3" else unit, amount / steel_t))
+    return rows
 
 
-def end_point_table(outcome: Outcome, index: int = 0) -> pd.DataFrame:
-    """Where the blow ends: name, value, unit, aim (NaN where none)."""
+def recipe_table(outcome: Outcome, index: int = 0) -> pd.DataFrame:
+    """What to charge and blow: name, amount, unit (kg or Nm³), per_t [unit/t steel]."""
     import pandas as pd
 
+    return pd.DataFrame(recipe_rows(outcome, index), columns=list(RecipeRow._fields))
+
+
+def end_point_rows(outcome: Outcome, index: int = 0) -> list[EndPointRow]:
+    """Where the blow ends, beside the aims."""
     s, values = outcome.state, outcome.heats.values
     rows: list[tuple[str, Any, str, Any]] = [
         ("temperature", s.T_K - ZERO_C_K, "°C", values["aim_temp_C"])
@@ -96,21 +125,32 @@ def end_point_table(outcome: Outcome, index: int = 0) -> pd.DataFrame:
         ("slag", s.slag_kg, "kg", np.nan),
         ("CaO/SiO₂", s.basicity, "", values["aim_basicity"]),
     ]
-    plain = [
-        (name, float(at(x, index)), unit, float(at(aim, index))) for name, x, unit, aim in rows
+    return [
+        EndPointRow(name, float(at(x, index)), unit, float(at(aim, index)))
+        for name, x, unit, aim in rows
     ]
-    return pd.DataFrame(plain, columns=["name", "value", "unit", "aim"])
+
+
+def end_point_table(outcome: Outcome, index: int = 0) -> pd.DataFrame:
+    """Where the blow ends: name, value, unit, aim (NaN where none)."""
+    import pandas as pd
+
+    return pd.DataFrame(end_point_rows(outcome, index), columns=list(EndPointRow._fields))
+
+
+def slag_rows(outcome: Outcome, index: int = 0) -> list[SlagRow]:
+    """Liquid slag, richest oxide first."""
+    kg = {name: float(at(x, index)) for name, x in outcome.state.slag_species_kg.items()}
+    total = sum(kg.values())
+    rows = [SlagRow(name, x, 100.0 * x / total) for name, x in kg.items() if x != 0.0]
+    return sorted(rows, key=lambda row: -row.pct)
 
 
 def slag_table(outcome: Outcome, index: int = 0) -> pd.DataFrame:
     """Liquid slag: oxide, kg, pct [mass %], richest first."""
     import pandas as pd
 
-    kg = {name: float(at(x, index)) for name, x in outcome.state.slag_species_kg.items()}
-    total = sum(kg.values())
-    rows = [(name, x, 100.0 * x / total) for name, x in kg.items() if x != 0.0]
-    rows.sort(key=lambda row: -row[1])
-    return pd.DataFrame(rows, columns=["oxide", "kg", "pct"])
+    return pd.DataFrame(slag_rows(outcome, index), columns=list(SlagRow._fields))
 
 
 def heat_balance_table(outcome: Outcome, index: int = 0) -> pd.DataFrame:
@@ -219,7 +259,7 @@ def inputs_table(heats: HeatTable, index: int = 0) -> pd.DataFrame:
     for name, array in heats.values.items():
         value = float(array[index])
         if np.isfinite(value) and not name.startswith("hm_"):
-            row = known[name]
+            row = known.get(name) or yield_parameter(name.removesuffix("_yield_factor"))
             rows.append((row.place, value, row.unit, row.description))
     for element, pct in heats.hm_pct.items():
         value = float(pct[index])

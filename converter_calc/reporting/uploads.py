@@ -12,13 +12,11 @@ from __future__ import annotations
 import csv
 import io
 import re
-import zipfile
-import zlib
 from collections.abc import Iterable, Iterator, Sequence
 from typing import TYPE_CHECKING, Any
-from xml.etree.ElementTree import ParseError
 
 from converter_calc.basis.errors import Fault, InputError
+from converter_calc.basis.workbooks import Limits, workbook_rows
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -35,11 +33,6 @@ ZIP_MARK, OLD_OFFICE_MARK = b"PK\x03\x04", b"\xd0\xcf\x11\xe0"
 _NUMBER = re.compile(r"[+-]?(\d+\.?\d*|\.\d+)([eE][+-]?\d{1,3})?")
 _COMMA_NUMBER = re.compile(r"[+-]?(\d+,?\d*|,\d+)([eE][+-]?\d{1,3})?")
 _BOTH_MARKS = re.compile(r"[+-]?\d[\d.,]*([.]\d*,|,\d*[.])\d+")
-#: What openpyxl and the zip and XML readers under it raise on a broken file.
-_BROKEN = (
-    zipfile.BadZipFile, zlib.error, ParseError, KeyError, ValueError, TypeError, IndexError,
-    AttributeError, EOFError, OSError, NotImplementedError, RuntimeError, OverflowError,
-)  # fmt: skip
 
 
 def parse_table(content: bytes, name: str = "table") -> pd.DataFrame:
@@ -105,44 +98,8 @@ def _csv_rows(text: str, separator: str, place: str) -> Iterator[list[Any]]:
 
 
 def _xlsx_rows(content: bytes, place: str) -> list[list[Any]]:
-    _check_parts(content, place)
-    from openpyxl import load_workbook
-
-    rows: list[list[Any]] = []
-    try:
-        book = load_workbook(io.BytesIO(content), read_only=True, data_only=True, keep_links=False)
-        sheet = book.worksheets[0]
-        sheet.reset_dimensions()  # the stated size may lie
-        for number, row in enumerate(sheet.iter_rows(values_only=True)):
-            if number > MOST_ROWS + 1:
-                break
-            if len(row) > MOST_COLUMNS and any(cell is not None for cell in row[MOST_COLUMNS:]):
-                raise _refused(place, f"more than {MOST_COLUMNS} columns")
-            rows.append(list(row[:MOST_COLUMNS]))
-    except _BROKEN as error:
-        raise _refused(place, "is no workbook that can be read (XLSX)") from error
-    return rows
-
-
-def _check_parts(content: bytes, place: str) -> None:
-    """Refuse what unpacks to too much, and XML that defines entities."""
-    try:
-        with zipfile.ZipFile(io.BytesIO(content)) as parts:
-            listed = parts.infolist()
-            size = sum(part.file_size for part in listed)
-            if len(listed) > MOST_PARTS or size > MOST_UNPACKED_BYTES:
-                message = (
-                    f"unpacks to {len(listed)} parts of {size / 1e6:.0f} MB; {MOST_PARTS} parts "
-                    f"of {MOST_UNPACKED_BYTES / 1e6:.0f} MB are allowed"
-                )
-                raise _refused(place, message)
-            for part in listed:
-                # zero bytes go, so that UTF-16 hides nothing
-                text = parts.read(part).replace(b"\x00", b"")
-                if b"<!DOCTYPE" in text or b"<!ENTITY" in text:
-                    raise _refused(place, "defines XML entities; such a workbook is not read")
-    except _BROKEN as error:
-        raise _refused(place, "is no workbook that can be read (XLSX)") from error
+    limits = Limits(MOST_UNPACKED_BYTES, MOST_PARTS, MOST_ROWS, MOST_COLUMNS)
+    return list(workbook_rows(io.BytesIO(content), place, limits))
 
 
 def _frame(

@@ -8,18 +8,20 @@ Source of the method: mass balance; the numbers in it carry theirs in each term.
 
 from __future__ import annotations
 
-import itertools
 from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import NamedTuple
 
-import numpy as np
-
 from converter_calc.basis.errors import InfeasibleError
+from converter_calc.tapping.aim_additions import (
+    TAPPED_KG,
+    AimTap,
+    choose_for_aim,
+    target_carbon,
+)
 from converter_calc.tapping.grade_library import Grade
-from converter_calc.tapping.tap_practice import Addition, TapPractice
+from converter_calc.tapping.tap_practice import TapPractice
 
-TAPPED_KG = 1000.0
 ALWAYS_AIMED = ("Mn", "Si")
 NEVER_ADDED = frozenset({"C", "P", "S", "Fe"})
 BALANCE = "mass balance of the tap"
@@ -62,24 +64,6 @@ class ConverterAim:
     notes: list[str]
 
 
-class _Tap(NamedTuple):
-    """One choice of additions: kg/t each, what they bring [kg/t], and the carbon it leaves."""
-
-    kg: dict[str, float]
-    gains: dict[str, dict[str, float]]
-    C_tap_pct: float | None
-
-    def brought_kg(self, element: str) -> float:
-        """Kilograms of the element that the additions leave in the steel [kg/t]."""
-        return sum(kg * self.gains[name].get(element, 0.0) for name, kg in self.kg.items())
-
-    @property
-    def steel_kg(self) -> float:
-        """Steel in the ladle per tonne tapped [kg]."""
-        brought = (kg * sum(self.gains[name].values()) for name, kg in self.kg.items())
-        return TAPPED_KG + sum(brought)
-
-
 def converter_aim(grade: Grade, practice: TapPractice) -> ConverterAim:
     """Carbon, phosphorus, sulphur and tramp aims of the converter for this grade.
 
@@ -97,9 +81,9 @@ def converter_aim(grade: Grade, practice: TapPractice) -> ConverterAim:
     ------
     InfeasibleError : nothing is left for the phosphorus or the sulphur of the metal.
     """
-    target_C = _target_carbon(grade, practice)
+    target_C = target_carbon(grade, practice)
     targets = ladle_targets(grade, practice)
-    tap = _choose_additions(target_C, targets, practice)
+    tap = choose_for_aim(target_C, targets, grade, practice)
     terms: list[Term] = []
     notes: list[str] = []
     _tell_additions(tap, targets, grade, practice, terms)
@@ -142,105 +126,8 @@ def ladle_targets(grade: Grade, practice: TapPractice) -> dict[str, float]:
     return targets
 
 
-def size_additions(
-    targets_pct: Mapping[str, float],
-    chosen: Mapping[str, Addition],
-    residual_pct: Mapping[str, float],
-    recovery: Mapping[str, float],
-) -> dict[str, float]:
-    """Additions that bring 1000 kg of tapped steel to the targets, all at once.
-
-    For each element e: 10 residual_e + sum_j a_j gain_je = target_e/100 * (1000 + sum_j a_j m_j),
-    where a_j [kg/t], gain_je [kg/kg] and m_j its sum over the elements. An addition that
-    would come out negative (another one brings its element already) is left out.
-
-    Parameters
-    ----------
-    targets_pct, residual_pct : element -> mass % in the ladle, before the tap.
-    chosen : element -> addition that supplies it.
-    recovery : element -> share of an addition that ends in the steel.
-
-    Returns
-    -------
-    Name of the addition -> kg per tonne tapped, in the order of the targets.
-    """
-    left = list(targets_pct)
-    while left:
-        gains = [chosen[element].gain_kg(recovery) for element in left]
-        share = [targets_pct[element] / 100.0 for element in left]
-        matrix = [
-            [gain.get(element, 0.0) - x * sum(gain.values()) for gain in gains]
-            for element, x in zip(left, share, strict=True)
-        ]
-        missing = [x * TAPPED_KG - 10.0 * residual_pct.get(element, 0.0)
-                   for element, x in zip(left, share, strict=True)]  # fmt: skip
-        kg = np.linalg.solve(np.array(matrix), np.array(missing))
-        worst = int(np.argmin(kg))
-        if kg[worst] >= 0.0:
-            return {chosen[e].name: float(a) for e, a in zip(left, kg, strict=True)}
-        del left[worst]
-    return {}
-
-
-def _target_carbon(grade: Grade, practice: TapPractice) -> float | None:
-    if "C" in grade.targets:
-        return grade.targets["C"]
-    low, high = grade.limits.get("C", (None, None))
-    if high is None:
-        return None
-    if low is not None:
-        return 0.5 * (low + high)
-    return high - min(practice.margin_C_pct, 0.5 * high)
-
-
-def _choose_additions(
-    target_C: float | None, targets: Mapping[str, float], practice: TapPractice
-) -> _Tap:
-    """The first set of additions, in the shop's order, whose carbon fits; else the leanest."""
-    orders = [practice.alloy_order[element] for element in targets]
-    tried: list[_Tap] = []
-    for names in itertools.product(*orders):
-        chosen = {e: practice.additions[name] for e, name in zip(targets, names, strict=True)}
-        tap = _fill(target_C, targets, chosen, practice)
-        if tap.C_tap_pct is None or tap.C_tap_pct >= practice.lowest_end_C_pct:
-            return tap
-        tried.append(tap)
-    return min(tried, key=lambda tap: tap.brought_kg("C"))
-
-
-def _fill(
-    target_C: float | None,
-    targets: Mapping[str, float],
-    chosen: dict[str, Addition],
-    practice: TapPractice,
-) -> _Tap:
-    """Size one set; where it leaves more carbon than can be caught, carburiser joins."""
-    tap = _size(target_C, targets, chosen, practice.residual_pct, practice)
-    if target_C is None or tap.C_tap_pct is None or tap.C_tap_pct <= practice.highest_end_C_pct:
-        return tap
-    filler = practice.additions[practice.alloy_order["C"][0]]
-    residual = {**practice.residual_pct, "C": practice.highest_end_C_pct}
-    wanted, supply = {**targets, "C": target_C}, {**chosen, "C": filler}
-    return _size(target_C, wanted, supply, residual, practice)
-
-
-def _size(
-    target_C: float | None,
-    targets: Mapping[str, float],
-    chosen: Mapping[str, Addition],
-    residual: Mapping[str, float],
-    practice: TapPractice,
-) -> _Tap:
-    kg = size_additions(targets, chosen, residual, practice.recovery)
-    gains = {a.name: a.gain_kg(practice.recovery) for a in chosen.values() if a.name in kg}
-    tap = _Tap(kg, gains, None)
-    if target_C is None:
-        return tap
-    return tap._replace(C_tap_pct=(target_C / 100.0 * tap.steel_kg - tap.brought_kg("C")) / 10.0)
-
-
 def _tell_additions(
-    tap: _Tap,
+    tap: AimTap,
     targets: Mapping[str, float],
     grade: Grade,
     practice: TapPractice,
@@ -254,7 +141,9 @@ def _tell_additions(
         terms.append(Term(f"{name} added", kg, "kg/t", practice.additions[name].source))
 
 
-def _carried_terms(element: str, tap: _Tap, aimed_pct: float, practice: TapPractice) -> list[Term]:
+def _carried_terms(
+    element: str, tap: AimTap, aimed_pct: float, practice: TapPractice
+) -> list[Term]:
     """From the content aimed at in the ladle back to the tap: dilution, then each addition."""
     more = aimed_pct * (tap.steel_kg - TAPPED_KG) / TAPPED_KG
     terms = [Term(f"{element}: dilution by the additions", more, "mass %", BALANCE)]
@@ -268,7 +157,7 @@ def _carried_terms(element: str, tap: _Tap, aimed_pct: float, practice: TapPract
 
 def _carbon(
     target: float | None,
-    tap: _Tap,
+    tap: AimTap,
     grade: Grade,
     practice: TapPractice,
     terms: list[Term],
@@ -294,7 +183,7 @@ def _carbon(
 
 def _residue(
     element: str,
-    tap: _Tap,
+    tap: AimTap,
     grade: Grade,
     practice: TapPractice,
     terms: list[Term],
@@ -337,7 +226,7 @@ def _residue(
     return aim
 
 
-def _manganese(tap: _Tap, grade: Grade, practice: TapPractice, terms: list[Term]) -> float | None:
+def _manganese(tap: AimTap, grade: Grade, practice: TapPractice, terms: list[Term]) -> float | None:
     """None where the ladle sets it; the limit itself where the residual may break it."""
     highest = grade.highest_pct("Mn")
     residual = practice.residual_pct.get("Mn", 0.0)
@@ -349,7 +238,7 @@ def _manganese(tap: _Tap, grade: Grade, practice: TapPractice, terms: list[Term]
     return aim
 
 
-def _tell_excess(tap: _Tap, grade: Grade, notes: list[str]) -> None:
+def _tell_excess(tap: AimTap, grade: Grade, notes: list[str]) -> None:
     """Note each element that the additions alone carry over its maximum."""
     for element, (_, high) in grade.limits.items():
         if high is None or element in {"C", "P", "S"}:
@@ -360,7 +249,7 @@ def _tell_excess(tap: _Tap, grade: Grade, notes: list[str]) -> None:
 
 
 def _tramp_max(
-    tap: _Tap,
+    tap: AimTap,
     targets: Mapping[str, float],
     grade: Grade,
     practice: TapPractice,

@@ -1,6 +1,6 @@
 """What happens between the end of the blow and the ladle analysis, as the shop does it.
 
-Margins, slag carried over, recoveries, and the additions that can be made at tap.
+Margins, slag carried over, recoveries, additions, deoxidation and temperature losses.
 """
 
 from __future__ import annotations
@@ -8,50 +8,27 @@ from __future__ import annotations
 import difflib
 import math
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 from converter_calc.basis.errors import Fault, InputError
-from converter_calc.data.tables import read_csv_rows, read_toml
+from converter_calc.data.tables import read_csv_rows
+from converter_calc.laws import deoxidation
+from converter_calc.tapping.additions import Addition, additions
 
-GROUPS = ("residual", "recovery", "stays")
+#: Group of the data file -> field of a practice.
+TABLES = {
+    "residual": "residual_pct",
+    "recovery": "recovery",
+    "stays": "stays_share",
+    "first_oxygen": "first_oxygen_share",
+    "price_per_t": "price_per_t",
+    "additions_kg_per_t": "additions_kg_per_t",
+}
+#: Tables by the name of an addition; the others go by element.
+BY_ADDITION = ("price_per_t", "additions_kg_per_t")
+FIRST_TAKERS = ("C", "Si", "Mn")
 BY_SHOP = "given by the shop"
-
-
-@dataclass(frozen=True)
-class Addition:
-    """A ferro-alloy or other addition at tap.
-
-    Attributes
-    ----------
-    name : trade name.
-    supplies : the element it is added for.
-    pct : analysis as weighed [mass %].
-    rest_is_iron : what is missing to 100 is iron and joins the steel.
-    recovery : element -> share (0..1) that ends in the steel, where it is not the shop's.
-    source : of the analysis.
-    """
-
-    name: str
-    supplies: str
-    pct: dict[str, float]
-    rest_is_iron: bool
-    source: str
-    recovery: dict[str, float]
-
-    def gain_kg(self, recovery: Mapping[str, float]) -> dict[str, float]:
-        """Element -> kg that ends in the steel per kg added [kg/kg].
-
-        `recovery` is the shop's; the addition's own goes before it. An element with none
-        is taken to enter wholly.
-        """
-        pct = dict(self.pct)
-        if self.rest_is_iron:
-            pct["Fe"] = pct.get("Fe", 0.0) + 100.0 - sum(self.pct.values())
-        return {
-            element: content / 100.0 * self.recovery.get(element, recovery.get(element, 1.0))
-            for element, content in pct.items()
-        }
 
 
 @dataclass(frozen=True)
@@ -59,10 +36,11 @@ class TapPractice:
     """The shop's practice from the end of the blow to the ladle analysis.
 
     Margins, lowest and highest end contents and slag analyses [mass %]; carried-over slag
-    [kg/t of tapped steel]; shares and recoveries 0..1. `residual_pct`: content left at the end
-    of the blow [mass %]; `stays_share`: share of a charged tramp element left in the steel;
-    `alloy_order`: element -> additions, the first whose carbon fits is used; `sources`:
-    field -> source.
+    [kg/t of tapped steel]; shares and recoveries 0..1; all other units and meanings:
+    data/tap_practice.csv. `residual_pct`: content left at the end of the blow [mass %];
+    `stays_share`: share of a charged tramp element left in the steel; `alloy_order`: element
+    -> additions, the first whose carbon fits is used; `additions_kg_per_t`: made whatever the
+    grade asks; `use`: additions at hand, empty = all; `sources`: field -> source. NaN: not given.
     """
 
     margin_C_pct: float
@@ -77,27 +55,78 @@ class TapPractice:
     highest_end_C_pct: float
     lowest_end_P_pct: float
     lowest_end_S_pct: float
+    slag_FeO_reduced_share: float
+    slag_MnO_reduced_share: float
+    air_oxygen_kg_per_t: float
+    loss_to_air_share: float
+    Al_burnt_share: float
+    soluble_Al_pct: float
+    silica_activity: float
+    C_tolerance_pct: float
+    near_share: float
+    tap_min: float
+    stream_K_per_min: float
+    standing_min: float
+    standing_K_per_min: float
+    lining_temp_C: float
+    lining_effusivity: float
+    ladle_temp_C: float
+    additions_temp_C: float
+    ladle: str
+    aim_at: str
+    kill: str
+    aluminium_oxygen: str
     residual_pct: dict[str, float]
     recovery: dict[str, float]
     stays_share: dict[str, float]
+    first_oxygen_share: dict[str, float]
+    additions_kg_per_t: dict[str, float]
+    use: tuple[str, ...]
     alloy_order: dict[str, tuple[str, ...]]
     additions: dict[str, Addition]
     sources: dict[str, str]
 
+    @property
+    def priced(self) -> dict[str, Addition]:
+        """Additions at hand that have a price: what least cost chooses from."""
+        return {
+            name: addition
+            for name, addition in self.additions.items()
+            if addition.price_per_t is not None and (not self.use or name in self.use)
+        }
 
-def additions() -> dict[str, Addition]:
-    """Additions of the library by name (typical analyses, mass %, a source on each)."""
+    @property
+    def lining_start_C(self) -> float:
+        """Lining temperature before the tap: as given, else by the state of the ladle [C]."""
+        return self.lining_temp_C if math.isfinite(self.lining_temp_C) else ladles()[self.ladle]
+
+    @property
+    def aluminium_by_recovery(self) -> bool:
+        """The shop gave its own recovery of aluminium, which then stands for all its losses."""
+        return self.sources.get("recovery.Al") == BY_SHOP
+
+
+def ladles() -> dict[str, float]:
+    """State of the ladle -> lining temperature before the tap [C]. Common practice, no source."""
     return {
-        name: Addition(
-            name=name,
-            supplies=row["supplies"],
-            pct=dict(row["pct"]),
-            rest_is_iron=row["rest"] == "Fe",
-            source=row["source"],
-            recovery={},
-        )
-        for name, row in read_toml("ferroalloys.toml").items()
+        row["name"]: float(row["value"])
+        for row in read_csv_rows("tap_practice.csv")
+        if row["group"] == "ladle"
     }
+
+
+def named_additions(overrides: Mapping[str, Any] | None) -> list[str]:
+    """Every name of an addition that the `tap` table of a heat or shop file mentions."""
+    names: list[str] = []
+    given = overrides or {}
+    for key in BY_ADDITION:
+        table = given.get(key)
+        names += list(table) if isinstance(table, Mapping) else []
+    order = given.get("alloy_order")
+    lists = [given.get("use"), *(order.values() if isinstance(order, Mapping) else ())]
+    for entry in lists:
+        names += list(entry) if isinstance(entry, list | tuple) else []
+    return list(dict.fromkeys(map(str, names)))
 
 
 def tap_practice(
@@ -107,8 +136,10 @@ def tap_practice(
 
     Parameters
     ----------
-    overrides : field -> number [units of `TapPractice`]; `residual_pct`, `recovery`,
-        `stays_share`: element -> number; `alloy_order`: element -> list of addition names.
+    overrides : field -> number [units of `TapPractice`] or text; `residual_pct`, `recovery`,
+        `stays_share`, `first_oxygen_share`: element -> number; `price_per_t`,
+        `additions_kg_per_t`: addition -> number; `alloy_order`: element -> list of addition
+        names; `use`: list of addition names.
     own_additions : additions of the shop, beside or in place of those of the library.
 
     Raises
@@ -116,100 +147,149 @@ def tap_practice(
     InputError : unknown field (with the nearest), value that is no number or out of its
         range, unknown addition.
     """
-    bounds, values, order, sources = _defaults()
-    known = {**additions(), **(own_additions or {})}
-    faults: list[Fault] = []
+    values = _Values({**additions(), **(own_additions or {})})
     for key, given in (overrides or {}).items():
-        group = {"residual_pct": "residual", "stays_share": "stays"}.get(key, key)
-        if key in values["number"]:
-            _take(values["number"], bounds, "number", key, given, faults)
-            sources[key] = BY_SHOP
-        elif group not in (*GROUPS, "alloy_order"):
-            fields = [*values["number"], "residual_pct", "recovery", "stays_share", "alloy_order"]
+        values.take(key, given)
+    return values.practice()
+
+
+class _Values:
+    """Defaults of the data file, what the shop puts in their place, and the faults found."""
+
+    def __init__(self, known: dict[str, Addition]) -> None:
+        rows = read_csv_rows("tap_practice.csv")
+        self.known = known
+        self.rows = {(row["group"], row["name"]): row for row in rows}
+        self.faults: list[Fault] = []
+        self.numbers: dict[str, float] = {}
+        self.texts: dict[str, str] = {}
+        self.tables: dict[str, dict[str, float]] = {group: {} for group in TABLES}
+        self.order: dict[str, tuple[str, ...]] = {}
+        self.use: tuple[str, ...] = ()
+        self.sources: dict[str, str] = {}
+        for (group, name), row in self.rows.items():
+            single = group in ("number", "text")
+            self.sources[name if single else f"{group}.{name}"] = row["source"]
+            if group == "alloy_order":
+                self.order[name] = tuple(row["value"].split(";"))
+            elif group == "number":
+                self.numbers[name] = float(row["value"] or "nan")
+            elif group == "text":
+                self.texts[name] = row["value"]
+            elif group in TABLES and row["value"]:
+                self.tables[group][name] = float(row["value"])
+
+    def take(self, key: str, given: Any) -> None:
+        """Put one field of the shop in place, or note its fault."""
+        group = {name: group for group, name in TABLES.items()}.get(key, key)
+        if key in self.numbers:
+            self._number(self.numbers, "number", key, given)
+            self.sources[key] = BY_SHOP
+        elif key in self.texts:
+            self._text(key, given)
+        elif key == "use":
+            names = self._names("tap.use", given)
+            self.use = names or ()
+        elif group not in TABLES and group != "alloy_order":
+            fields = [*self.numbers, *self.texts, *TABLES.values(), "alloy_order", "use"]
             near = difflib.get_close_matches(str(key), fields, n=1, cutoff=0.3)
-            faults.append(Fault(f"tap.{key}", f"unknown field; nearest: {', '.join(near)}"))
+            self.faults.append(Fault(f"tap.{key}", f"unknown field; nearest: {', '.join(near)}"))
         elif not isinstance(given, Mapping):
-            faults.append(Fault(f"tap.{key}", "must be a table by element"))
+            what = "addition" if group in BY_ADDITION else "element"
+            self.faults.append(Fault(f"tap.{key}", f"must be a table by {what}"))
         else:
-            for element, entry in given.items():
-                sources[f"{group}.{element}"] = BY_SHOP
-                if group == "alloy_order":
-                    _take_order(order, element, entry, known, faults)
-                else:
-                    _take(values[group], bounds, group, element, entry, faults)
-    if not faults and values["number"]["lowest_end_C_pct"] > values["number"]["highest_end_C_pct"]:
-        faults.append(Fault("tap.lowest_end_C_pct", "is above highest_end_C_pct"))
-    if faults:
-        raise InputError(faults)
-    return TapPractice(
-        **values["number"],
-        residual_pct=values["residual"],
-        recovery=values["recovery"],
-        stays_share=values["stays"],
-        alloy_order=order,
-        additions=known,
-        sources=sources,
-    )
+            for name, entry in given.items():
+                self.sources[f"{group}.{name}"] = BY_SHOP
+                self._entry(group, str(name), entry)
 
-
-def _defaults() -> tuple[
-    dict[tuple[str, str], dict[str, str]],
-    dict[str, dict[str, float]],
-    dict[str, tuple[str, ...]],
-    dict[str, str],
-]:
-    """Rows by (group, name), their numbers by group, the alloy orders, the sources."""
-    rows = {(row["group"], row["name"]): row for row in read_csv_rows("tap_practice.csv")}
-    values: dict[str, dict[str, float]] = {group: {} for group in ("number", *GROUPS)}
-    order: dict[str, tuple[str, ...]] = {}
-    sources: dict[str, str] = {}
-    for (group, name), row in rows.items():
-        sources[name if group == "number" else f"{group}.{name}"] = row["source"]
+    def _entry(self, group: str, name: str, entry: Any) -> None:
         if group == "alloy_order":
-            order[name] = tuple(row["value"].split(";"))
+            self._order(name, entry)
+        elif group in BY_ADDITION and name not in self.known:
+            self._unknown(f"tap.{group}", name)
+        elif group == "first_oxygen" and name not in FIRST_TAKERS:
+            message = f"must be one of {', '.join(FIRST_TAKERS)}, given '{name}'"
+            self.faults.append(Fault("tap.first_oxygen_share", message))
         else:
-            values[group][name] = float(row["value"])
-    return rows, values, order, sources
+            self._number(self.tables[group], group, name, entry)
 
+    def _number(self, into: dict[str, float], group: str, name: str, given: Any) -> None:
+        """Store one number, or a fault that names the field and what is allowed."""
+        # an element without a row of its own has the bounds of its group
+        row = self.rows.get((group, name)) or next(
+            r for key, r in self.rows.items() if key[0] == group
+        )
+        low, high = float(row["min"]), float(row["max"])
+        spot = f"tap.{name}" if group == "number" else f"tap.{group}.{name}"
+        number = isinstance(given, int | float) and not isinstance(given, bool)
+        if not number or not math.isfinite(given) or not low <= given <= high:
+            unit = f" {row['unit']}" if row["unit"] else ""
+            message = f"must be {low:g} to {high:g}{unit}, given {given!r}"
+            self.faults.append(Fault(spot, message))
+            return
+        into[name] = float(given)
 
-def _take(
-    into: dict[str, float],
-    bounds: Mapping[tuple[str, str], Mapping[str, str]],
-    group: str,
-    name: str,
-    given: Any,
-    faults: list[Fault],
-) -> None:
-    """Store one number, or a fault that names the field and what is allowed."""
-    # an element without a row of its own has the bounds of its group
-    row = bounds.get((group, name)) or next(r for key, r in bounds.items() if key[0] == group)
-    low, high = float(row["min"]), float(row["max"])
-    spot = f"tap.{name}" if group == "number" else f"tap.{group}.{name}"
-    number = isinstance(given, int | float) and not isinstance(given, bool)
-    if not number or not math.isfinite(given) or not low <= given <= high:
-        message = f"must be {low:g} to {high:g} {row['unit']}, given {given!r}"
-        faults.append(Fault(spot, message))
-        return
-    into[name] = float(given)
+    def _text(self, key: str, given: Any) -> None:
+        allowed = {
+            "ladle": list(ladles()),
+            "aim_at": ["middle", "minimum"],
+            "kill": ["Al", "Si", "none"],
+            "aluminium_oxygen": deoxidation.laws("Al"),
+        }[key]
+        if given not in allowed:
+            message = f"must be one of {', '.join(allowed)}, given {given!r}"
+            self.faults.append(Fault(f"tap.{key}", message))
+            return
+        self.texts[key], self.sources[key] = given, BY_SHOP
 
+    def _unknown(self, spot: str, name: str) -> None:
+        near = difflib.get_close_matches(name, list(self.known), n=1, cutoff=0.3)
+        self.faults.append(Fault(spot, f"no addition '{name}'; nearest: {', '.join(near)}"))
 
-def _take_order(
-    order: dict[str, tuple[str, ...]],
-    element: str,
-    given: Any,
-    known: Mapping[str, Addition],
-    faults: list[Fault],
-) -> None:
-    spot = f"tap.alloy_order.{element}"
-    texts = isinstance(given, list | tuple) and all(isinstance(name, str) for name in given)
-    if not texts or not given:
-        faults.append(Fault(spot, f"must be a list of additions, given {given!r}"))
-        return
-    wrong = [name for name in given if name not in known]
-    poor = [name for name in given if name in known and element not in known[name].pct]
-    for name in wrong:
-        near = difflib.get_close_matches(str(name), list(known), n=1, cutoff=0.3)
-        faults.append(Fault(spot, f"no addition '{name}'; nearest: {', '.join(near)}"))
-    faults.extend(Fault(spot, f"'{name}' holds no {element}") for name in poor)
-    if not wrong and not poor:
-        order[element] = tuple(given)
+    def _names(self, spot: str, given: Any) -> tuple[str, ...] | None:
+        texts = isinstance(given, list | tuple) and all(isinstance(name, str) for name in given)
+        if not texts or not given:
+            self.faults.append(Fault(spot, f"must be a list of additions, given {given!r}"))
+            return None
+        wrong = [name for name in given if name not in self.known]
+        for name in wrong:
+            self._unknown(spot, name)
+        return None if wrong else tuple(given)
+
+    def _order(self, element: str, given: Any) -> None:
+        spot = f"tap.alloy_order.{element}"
+        names = self._names(spot, given)
+        if names is None:
+            return
+        poor = [name for name in names if element not in self.known[name].pct]
+        self.faults.extend(Fault(spot, f"'{name}' holds no {element}") for name in poor)
+        if not poor:
+            self.order[element] = names
+
+    def practice(self) -> TapPractice:
+        """The practice; raises InputError with every fault."""
+        if not self.faults:
+            if self.numbers["lowest_end_C_pct"] > self.numbers["highest_end_C_pct"]:
+                self.faults.append(Fault("tap.lowest_end_C_pct", "is above highest_end_C_pct"))
+            if sum(self.tables["first_oxygen"].values()) > 1.0:
+                self.faults.append(Fault("tap.first_oxygen_share", "adds up to more than 1"))
+        if self.faults:
+            raise InputError(self.faults)
+        prices = self.tables.pop("price_per_t")
+        known = {
+            name: replace(addition, price_per_t=prices.get(name, addition.price_per_t))
+            for name, addition in self.known.items()
+        }
+        single: dict[str, Any] = {**self.numbers, **self.texts}
+        return TapPractice(
+            **single,
+            residual_pct=self.tables["residual"],
+            recovery=self.tables["recovery"],
+            stays_share=self.tables["stays"],
+            first_oxygen_share=self.tables["first_oxygen"],
+            additions_kg_per_t=self.tables["additions_kg_per_t"],
+            use=self.use,
+            alloy_order=self.order,
+            additions=known,
+            sources=self.sources,
+        )

@@ -1,0 +1,120 @@
+"""Draws of one heat solved together: all of them lie near the heat as read.
+
+The draws differ from the heat by small random numbers z, so their answers are smooth functions
+of z. A few of them are followed from the heat itself; a fit to these, linear in z and with the
+products of the linear answers, starts all others so near that quasi-Newton steps without
+derivatives finish. What does not converge so goes through the ordinary solver.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import Any
+
+import numpy as np
+
+from converter_calc.balance.asks import Ask
+from converter_calc.balance.newton import Unknowns, dense, follow
+from converter_calc.balance.problem import Problem
+from converter_calc.balance.solving import Memory, solve_ask, units_of
+from converter_calc.balance.system import System
+from converter_calc.basis.dual import Array
+from converter_calc.basis.tolerances import (
+    FOLLOWED_STEPS,
+    POLISHED,
+    RECORDED_FROM,
+    RESIDUAL_STALLED,
+)
+
+#: Draws followed from the heat itself, and the least number a coefficient of the fit.
+FOLLOWED = 256
+FOLLOWED_A_TERM = 4
+#: Steps from the heat itself, which is further away than a fit.
+FAR_STEPS = 16
+#: Residual at which a followed draw may be fitted.
+GOOD = 1e-7
+
+
+def solve_draws(
+    p: Problem, ask: Ask, heat: Mapping[str, Array], z: Array, *, all_ways: bool = True
+) -> tuple[Unknowns, Array]:
+    """Unknowns of n draws of one heat, and which of them are solved.
+
+    Parameters
+    ----------
+    p : givens of the draws. heat : unknowns of the heat as read, (1,) each. z : the random
+    numbers of the draws (k, n). all_ways : what does not converge goes through the ordinary
+    solver; otherwise it stays unsolved.
+    """
+    n = p.n
+    if n < RECORDED_FROM:
+        solved = solve_ask(p, ask)
+        return solved.unknowns, solved.converged
+    system = System(p, ask, Memory().recorded)
+    names = list(ask.unknowns)
+    unit = units_of(p, names)
+    inverse = _inverse_at(system, {name: heat[name] for name in names}, unit)
+    size = max(FOLLOWED, FOLLOWED_A_TERM * (1 + len(z) + len(names) * (len(names) + 1) // 2))
+    rows = np.unique(np.linspace(0, n - 1, min(size, n)).astype(int))
+    start = {name: np.full(rows.size, float(heat[name][0])) for name in names}
+    some = {name: _cut(size, rows) for name, size in unit.items()}
+    x, left = follow(system, start, some, inverse, rows, FAR_STEPS)
+    good = left <= GOOD
+    if np.count_nonzero(good) < size // 2:
+        solved = solve_ask(p, ask)
+        return solved.unknowns, solved.converged
+    answers = np.stack([x[name][good] / _cut(some[name], good) for name in names], axis=1)
+    guess = _fitted(z[:, rows[good]], answers, z)
+    begin = {name: guess[k] * unit[name] for k, name in enumerate(names)}
+    everything = np.arange(n)
+    x, left = follow(system, begin, unit, inverse, everything, FOLLOWED_STEPS)
+    missed = np.flatnonzero(left > POLISHED)
+    if missed.size:  # afresh from where they stand, without the steps remembered
+        start = {name: x[name][missed] for name in names}
+        some = {name: _cut(size, missed) for name, size in unit.items()}
+        again, left[missed] = follow(system, start, some, inverse, missed, FAR_STEPS)
+        for name in names:
+            x[name][missed] = again[name]
+    converged = left <= RESIDUAL_STALLED
+    missed = np.flatnonzero(~converged)
+    if missed.size and all_ways:
+        solved = solve_ask(p.take(missed), ask)
+        for name in names:
+            x[name][missed] = solved.unknowns[name]
+        converged[missed] = solved.converged
+    return x, converged
+
+
+def _cut(x: Any, rows: Array) -> Any:
+    return x[rows] if isinstance(x, np.ndarray) and x.ndim else x
+
+
+def _inverse_at(
+    system: System, heat: Mapping[str, Array], unit: Mapping[str, Any]
+) -> list[list[float]]:
+    """Change of each unknown in its unit by each residual, at the heat as read."""
+    J = dense(system.jacobian(np.array([0]), heat)[1], 1)[0]
+    size = np.array([float(np.ravel(unit[name])[0]) for name in heat])
+    found: list[list[float]] = np.linalg.inv(J * size).tolist()
+    return found
+
+
+def _fitted(z: Array, answers: Array, wanted: Array) -> Array:
+    """Answers (n, u) of draws z (k, n), carried to the draws `wanted` (k, m): (u, m)."""
+
+    def linear(x: Array) -> Array:
+        return np.concatenate([np.ones((1, x.shape[1])), x])
+
+    def products(y: Array) -> Array:
+        return np.concatenate([y[k] * y[k:] for k in range(len(y))])
+
+    terms = linear(z)
+    first = np.linalg.lstsq(terms.T, answers, rcond=1e-10)[0].T
+    middle = (first @ terms).mean(axis=1)
+    first[:, 0] -= middle
+    spread = (first @ terms).std(axis=1)
+    first /= np.where(spread > 0.0, spread, 1.0)[:, None]
+    table = np.concatenate([terms, products(first @ terms)])
+    found = np.linalg.lstsq(table.T, answers, rcond=1e-10)[0].T
+    terms = linear(wanted)
+    return np.asarray(found @ np.concatenate([terms, products(first @ terms)]))
