@@ -404,7 +404,7 @@ rows = st.lists(
 
 
 @given(rows)
-@settings(max_examples=60, deadline=None, suppress_health_check=[HealthCheck.too_slow])
+@settings(max_examples=25, deadline=None, suppress_health_check=[HealthCheck.too_slow])
 def test_a_log_goes_out_and_comes_back_to_the_last_digit(tmp_path_factory, given_rows):
     """contract: CSV, Parquet and XLSX, any text, any double."""
     read = read_log(pd.DataFrame(given_rows))

@@ -155,12 +155,13 @@ def test_derivatives_stay_finite_at_zero(name):
 
 
 LAW_FILES = ("phosphorus.toml", "manganese.toml", "sulphur.toml", "carbon_oxygen.toml")
-ONE_LAW_FILES = ("iron_oxide.toml", "magnesia.toml", "lime.toml")
+ONE_LAW_FILES = ("iron_oxide.toml", "magnesia.toml", "lime.toml", "saturation.toml")
 #: What a law row may hold; anything else is a slip of the pen that would be ignored.
 LAW_KEYS = {
     *("name", "source", "year", "known", "range", "scatter_log10", "formula"),
     *("left_side", "linear", "log_factor", "inside_log", "per_T", "constant"),
-    *("activity", "carbon_per_T", "carbon_constant", "printed_K", "printed_k", "iron_oxide", "basis"),
+    "activity",
+    *("carbon_per_T", "carbon_constant", "printed_K", "printed_k", "iron_oxide", "basis"),
     *("optical_basicity", "lambda_1", "lambda_2", "lambda_per_T", "unused_branch"),
     *("e_C_C", "e_C_O", "e_O_O", "e_O_C", "top", "combined", "bottom", "spread"),
 }

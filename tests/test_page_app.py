@@ -569,9 +569,11 @@ def test_bad_axis_of_a_link_is_told(address: dict[str, str], word: str) -> None:
 
 
 def test_same_fields_have_the_same_answer_within_bounds() -> None:
-    from converter_calc.page.session import Answer, Answers
+    from converter_calc.page.session import Answer
+    from converter_calc.page.store import Store
 
-    store, worked_out = Answers(most=2), []
+    worked_out: list[str] = []
+    store: Store[Answer] = Store(most=2)
 
     def solve(name: str) -> Answer:
         worked_out.append(name)

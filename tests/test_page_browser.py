@@ -275,6 +275,7 @@ def test_each_view_is_whole_and_accessible(
         chromium, address, viewport={"width": width, "height": 1000}, color_scheme=scheme
     )
     pb.go(found, address)
+    found.get_by_text("Materials of the shop and prices").click()
     for view in VIEWS:
         pb.show(found, view)
         for _ in range(CHARTS.get(view, 0)):

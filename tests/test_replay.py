@@ -1,7 +1,7 @@
 """Replay of a heat log. Kinds of check: identity (replay is the prediction of each heat) and
 derivative (implicit derivatives against central differences of replays, 1e-5 of the largest;
 a difference itself is good to about 1e-7).
-"""  # noqa: D205
+"""
 
 from __future__ import annotations
 
@@ -60,7 +60,7 @@ def test_replay_is_the_prediction_of_each_heat() -> None:
 
 def test_slag_is_that_of_a_sample() -> None:
     """Undissolved lime and sulphide count as CaO, all iron as FeO: mass balance by molar masses
-    of the standard atomic weights (CaO 56.08, CaS 72.14, FeO 71.84, Fe2O3 159.69)."""  # noqa: D209
+    of the standard atomic weights (CaO 56.08, CaS 72.14, FeO 71.84, Fe2O3 159.69)."""
     found = replay(ready())
     table = converter_calc.predict(charges(60), SHOP)
     iron = table["slag_FeO_pct"] + table["slag_Fe2O3_pct"] * 2 * 71.844 / 159.687
@@ -143,7 +143,10 @@ def test_an_outcome_that_is_missing_is_not_zero() -> None:
     ("change", "words"),
     [
         ({"drop": "oxygen_Nm3"}, "oxygen_Nm3: the log has no such column"),
-        ({"values": {"heat_loss": 3.0}}, "heat_loss: is no numeric input; nearest: heat_loss"),
+        (
+            {"values": {"iron_oxid": 3.0}},
+            "iron_oxid: is no numeric input; nearest: iron_oxide_factor",
+        ),
     ],
 )
 def test_wrong_calls_are_told_in_one_sentence(change: dict[str, object], words: str) -> None:

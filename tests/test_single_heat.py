@@ -14,15 +14,16 @@ import numpy as np
 import pytest
 
 import converter_calc
-from converter_calc.balance import single, solving
+from converter_calc.balance import recordings, single, solving
 from converter_calc.balance.heats import heats_from_dict
 from converter_calc.balance.problem import build_problem
 from converter_calc.basis import dual as ad
 from converter_calc.basis.errors import ConverterError
-from converter_calc.basis.scalar import compile_scalar
 from converter_calc.basis.tape import Tape
+from converter_calc.basis.written import write_out
 from converter_calc.planning.solving import plan_groups
 from converter_calc.thermo.enthalpy import EnthalpySet
+from tests.bench.conftest import CHARGED, SHOP, draw_heats
 from tests.conftest import demo_files
 from tests.demo import whole
 
@@ -30,10 +31,10 @@ NAMES = [path.stem for path in demo_files()]
 
 
 @pytest.fixture(autouse=True)
-def no_recordings(monkeypatch: pytest.MonkeyPatch) -> single.Recordings:
+def no_recordings(monkeypatch: pytest.MonkeyPatch) -> recordings.Recordings:
     """An empty store, so that no test rests on the heats of another."""
-    store = single.Recordings()
-    monkeypatch.setattr(single, "RECORDINGS", store)
+    store = recordings.Recordings()
+    monkeypatch.setattr(recordings, "RECORDINGS", store)
     return store
 
 
@@ -71,7 +72,7 @@ def shifted(document: dict[str, Any], k: int) -> dict[str, Any]:
 
 @pytest.mark.parametrize("name", NAMES)
 def test_recorded_heat_equals_ordinary_heat(
-    name: str, monkeypatch: pytest.MonkeyPatch, no_recordings: single.Recordings
+    name: str, monkeypatch: pytest.MonkeyPatch, no_recordings: recordings.Recordings
 ) -> None:
     document = whole(name)
     for k in range(6):
@@ -89,12 +90,12 @@ def test_recorded_heat_equals_ordinary_heat(
 
 
 def test_recordings_are_made_once_and_kept_within_bounds(
-    monkeypatch: pytest.MonkeyPatch, no_recordings: single.Recordings
+    monkeypatch: pytest.MonkeyPatch, no_recordings: recordings.Recordings
 ) -> None:
-    monkeypatch.setattr(single, "RECORDINGS_KEPT", 2)
+    monkeypatch.setattr(recordings, "RECORDINGS_KEPT", 2)
     made = []
-    record = single._record
-    monkeypatch.setattr(single, "_record", lambda *a: made.append(1) or record(*a))
+    record = recordings._record
+    monkeypatch.setattr(recordings, "_record", lambda *a: made.append(1) or record(*a))
     document = whole("ordinary_low_carbon")
     for k in range(5):
         answer(shifted(document, k))
@@ -149,9 +150,9 @@ def test_scalar_text_is_the_formula() -> None:
     tape = Tape()
     seeded = formula(ad.seed(tape.input("x"), "x"), ad.seed(tape.input("y"), "y"))
     outputs = [part for z in seeded for part in (ad.value(z), ad.slope(z, "x"), ad.slope(z, "y"))]
-    made = compile_scalar(tape, [*outputs, 7.0], ["unused", "y", "x"])
+    made = write_out(tape, [*outputs, 7.0], ["unused", "y", "x"])
     for x, y in np.random.default_rng(5).uniform(0.4, 3.0, (40, 2)).tolist():
-        got = made([math.nan, y, x])
+        got = made.floats([math.nan, y, x])
         wanted = formula(ad.seed(np.array([x]), "x"), ad.seed(np.array([y]), "y"))
         plain = [
             float(np.reshape(part, -1)[0])
@@ -164,4 +165,40 @@ def test_scalar_text_is_the_formula() -> None:
 def test_scalar_refuses_what_it_cannot_write() -> None:
     tape = Tape()
     with pytest.raises(TypeError, match="no text for"):
-        compile_scalar(tape, [np.arctan(tape.input("x"))], ["x"])
+        write_out(tape, [np.arctan(tape.input("x"))], ["x"])
+
+
+def test_recorded_table_equals_ordinary_table(no_recordings: recordings.Recordings) -> None:
+    """Short tables too: values, heats without an answer, and rows that are cut out on the way."""
+    frame = draw_heats(40)
+    frame.loc[5, "hot_metal_temp_C"] = 1180.0
+    frame.loc[7, "hm_Si_pct"] = 0.0
+    for solve, table in (
+        (converter_calc.predict, frame),
+        (converter_calc.plan, frame.drop(columns=CHARGED)),
+    ):
+        found = [solve(table, shop=SHOP) for _ in range(4)]
+        assert no_recordings._made
+        for name in found[0]:
+            if found[0][name].dtype == float:
+                np.testing.assert_allclose(
+                    found[-1][name], found[0][name], rtol=1e-10, atol=1e-7, err_msg=name
+                )
+            else:
+                assert found[-1][name].tolist() == found[0][name].tolist()
+
+
+def test_written_text_over_arrays_is_the_formula() -> None:
+    tape = Tape()
+    x, y = tape.input("x"), tape.input("y")
+    X, Y = np.random.default_rng(6).uniform(0.4, 3.0, (2, 30))
+
+    def formula(a: Any, b: Any) -> list[Any]:
+        low = ad.where((a > 0.5) & (b < 2.0), np.minimum(a, b), np.maximum(b, 1.0))
+        return [low, *EnthalpySet([("CO", "stable"), ("N2", "stable")]).evaluate_dual(b * 900.0)]
+
+    made = write_out(tape, formula(x, y), ["x", "y"])
+    for got, wanted in zip(made.arrays([X, Y]), formula(X, Y), strict=True):
+        np.testing.assert_allclose(got, wanted, rtol=1e-14)
+    for got, wanted in zip(made.arrays([X, 1.5]), formula(X, np.full(30, 1.5)), strict=True):
+        np.testing.assert_allclose(got, wanted, rtol=1e-14)

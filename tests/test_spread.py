@@ -146,8 +146,8 @@ def brute(n: int, seed: int) -> Any:
 
 
 def test_chances_agree_with_brute_force() -> None:
-    """40,000 independent draws: four of their standard errors, and ours."""
-    n = 40000
+    """20,000 independent draws: four of their standard errors, and ours."""
+    n = 20000
     table, sp = brute(n, 7), found()
     hits = np.ones(n, dtype=bool)
     for c in sp.chances:
@@ -165,26 +165,29 @@ def test_chances_agree_with_brute_force() -> None:
 
 
 def test_shares_agree_with_the_estimator_of_scipy() -> None:
-    """scipy.stats.sobol_indices (Saltelli's design) on the same heat, errors independent."""
-    sp = spread(ordinary(errors={"correlations": UNCORRELATED}), needs=False)
+    """scipy.stats.sobol_indices (Saltelli's design) on the same heat with five errors that are
+    independent. P bends where lime stops dissolving: 2 % of its variance is left to no
+    polynomial, and each error has a part in that."""
+    names = ("oxygen_meter_pct", "hm_C_pct", "hm_Si_pct", "iron_oxide_pct", "P_law_pct")
+    sizes = {name: known_errors()[name][0].sd for name in names}
+    sp = spread(ordinary(errors=only(**sizes) | {"correlations": UNCORRELATED}), needs=False)
     x = predict_heats(sp.charge)[0][1].x
+    assert sp.model.size == len(names)
 
     def model(z: Any) -> Any:
         values = draw(sp.charge, PREDICT, x, sp.model, np.asarray(z), end_points).values
         return np.stack([values[name] for name in MAIN])
 
     normal = [scipy.stats.norm()] * sp.model.size
-    peer = scipy.stats.sobol_indices(func=model, n=4096, dists=normal, rng=np.random.default_rng(3))
+    peer = scipy.stats.sobol_indices(func=model, n=8192, dists=normal, rng=np.random.default_rng(3))
     mine = {tuple(share.errors): share for share in sp.shares}
-    for group in sp.model.groups:
-        if len(group) > 1:  # peers take inputs one by one
-            continue
-        share = mine[sp.model.names_of(group)]
+    for (place,) in sp.model.groups:
+        share = mine[sp.model.names_of((place,))]
         for k, name in enumerate(MAIN):
-            total = float(peer.total_order[k, group[0]])
-            # the scatter of the peer is about 0.01; P bends where lime stops dissolving, which
-            # leaves 1 to 2 % of its variance to no polynomial
-            assert share.total[name] == pytest.approx(total, abs=0.025), (share.label, name)
+            total, first = float(peer.total_order[k, place]), float(peer.first_order[k, place])
+            near = 0.02 if name == "end_P_pct" else 0.01
+            assert share.total[name] == pytest.approx(total, abs=near), (share.label, name)
+            assert share.first[name] == pytest.approx(first, abs=2 * near), (share.label, name)
     assert sp.explained["end_temp_C"] > 0.999
     assert sp.explained["end_P_pct"] > 0.97
 
@@ -221,6 +224,14 @@ def test_draws_are_predictions() -> None:
     )
 
 
+def test_the_charge_just_planned_ends_where_the_plan_does() -> None:
+    """Solved anew by `predict`: the same end point, to rounding."""
+    charge, x = charge_of(found().planned)
+    again = predict_heats(charge)[0][1].x
+    for name in PREDICT.unknowns:
+        np.testing.assert_allclose(x[name], again[name], rtol=1e-10, err_msg=name)
+
+
 def test_same_seed_same_numbers_whatever_the_processes(monkeypatch: pytest.MonkeyPatch) -> None:
     other = spread(ordinary(), seed=2)
     assert other.all_windows.probability != found().all_windows.probability
@@ -232,16 +243,16 @@ def test_same_seed_same_numbers_whatever_the_processes(monkeypatch: pytest.Monke
 
 
 def test_intervals_cover_a_closed_form() -> None:
-    """P(w z < 1) = Phi(1 / |w|): 95 % intervals of 200 seeds, 178 to 199 of them (binomial)."""
+    """P(w z < 1) = Phi(1 / |w|): of 95 % intervals of 100 seeds 87 to 100 (binomial, 1e-3)."""
     w = np.array([1.0, 0.8, 0.6, 0.4, 0.3, 0.3, 0.2, 0.2, 0.1, 0.1])
     true = scipy.stats.norm.cdf(1.0 / np.sqrt(w @ w))
     inside = 0
-    for seed in range(200):
+    for seed in range(100):
         plan = plan_draws(1024, seed)
         hits = w @ normal_draws(plan, w.size, 0, plan.replicates) < 1.0
         c = chance("", "", hits, plan.replicates)
         inside += c.low <= true <= c.high
-    assert 178 <= inside <= 199
+    assert 87 <= inside <= 100
 
 
 def test_needed_charge_is_what_plans_of_the_truth_ask_for() -> None:

@@ -17,6 +17,7 @@ import numpy as np
 from converter_calc.balance.asks import REACH, Ask, first_guess
 from converter_calc.balance.newton import Solved, Unknowns, dense, follow, solve
 from converter_calc.balance.problem import Problem
+from converter_calc.balance.schema import is_element_column
 from converter_calc.balance.single import solve_single
 from converter_calc.balance.system import Recorded, System
 from converter_calc.basis.dual import Array
@@ -42,8 +43,9 @@ EXTENSIVE = {
     "trim_kg": 0.05,
     "heat_loss_J": 1e6,
 }
-#: Times the first guess of the slag, in a last go for heats with slag from before.
-MORE_SLAG = 1.3
+#: Times the first guess of the slag, and Newton steps, of a last go for heats with slag from
+#: before.
+MORE_SLAG, MORE_STEPS = 1.3, 20
 #: Residual at which a heat of the sample is good enough to start others from.
 GOOD_START = 1e-7
 #: Standard deviations at which an input is cut off in the fit, so that an outlier among the
@@ -90,7 +92,7 @@ def _finish(system: System, solved: Solved, first: Unknowns) -> None:
     """
     goes: list[tuple[int, float | None]] = [(QUICK_STEPS, None), (MOST_STEPS, 1.0)]
     if system.p.returned:
-        goes.append((MOST_STEPS, MORE_SLAG))
+        goes.append((MORE_STEPS, MORE_SLAG))
     for steps, more_slag in goes:
         left = np.flatnonzero(~solved.converged)
         if more_slag is not None:
@@ -135,7 +137,11 @@ def _varying(p: Problem) -> tuple[str, ...]:
         f"{part}:{name}"
         for part in ("values", "fixed", "hot_metal_pct")
         for name, x in getattr(p, part).items()
-        if isinstance(x, np.ndarray) and x.ndim and (part, name) != ("hot_metal_pct", "Fe")
+        if isinstance(x, np.ndarray)
+        and x.ndim
+        and (part, name) != ("hot_metal_pct", "Fe")
+        # the analysis stands in hot_metal_pct, where a blank is 0
+        and not (part == "values" and is_element_column(name))
     )
 
 

@@ -37,9 +37,9 @@ BLOCK = 8192
 CHUNK = 16384
 #: Width at which the two sides of a complementarity condition meet, dimensionless.
 CORNER = 1e-8
-#: Heat of one kind from which its formulas are recorded for single heats (recording and
-#: compiling cost about two ordinary solves), recordings kept at once, and quick steps before a
-#: heat goes the ordinary way.
+#: Time that heats of one kind are solved from which their equations are recorded (recording
+#: and writing out cost about two ordinary solves), recordings kept at once (half a
+#: megabyte each), and quick steps before a single heat goes the ordinary way.
 RECORDED_FROM_HEAT = 3
 RECORDINGS_KEPT = 48
 MOST_QUICK_STEPS = 30

@@ -9,11 +9,14 @@ from typing import TYPE_CHECKING, Any
 
 import click
 
-from converter_calc.basis.errors import InputError
+from converter_calc.basis.errors import Fault, InputError
 from converter_calc.commands.shared import HEAT, JSON, NO_ANSWER, guarded, write_json
 
 if TYPE_CHECKING:
     from converter_calc.balance.heats import HeatTable
+
+#: Most of a material that --add takes [kg]: no converter holds more.
+MOST_ADDED_KG = 1e5
 
 
 @click.command()
@@ -126,6 +129,13 @@ def lime(heat: Path, json_to: str | None) -> None:
     help="Most phosphorus brought back by recycled slag, kg per tonne of steel.",
 )
 @click.option("--of", "materials", metavar="NAMES", help="Fluxes to choose from, with commas.")
+@click.option(
+    "--add",
+    "added",
+    multiple=True,
+    metavar="MATERIAL=KG",
+    help="A material charged in every mix, such as recycled_slag=2000.",
+)
 @JSON
 @guarded
 def fluxes(
@@ -134,13 +144,15 @@ def fluxes(
     fluorspar: float,
     recycled_p: float,
     materials: str | None,
+    added: tuple[str, ...],
     json_to: str | None,
 ) -> None:
     """Compare carriers of lime and magnesia for HEAT, and choose fluxes by least cost."""
-    from converter_calc.metallurgy.flux_choice import choose_fluxes
-    from converter_calc.metallurgy.flux_mixes import flux_mixes
+    from converter_calc.metallurgy.flux_choice import CANDIDATES, choose_fluxes
+    from converter_calc.metallurgy.flux_mixes import check_materials, flux_mixes
     from converter_calc.metallurgy.flux_search import FluxLimits
     from converter_calc.planning.plan import as_heats
+    from converter_calc.planning.solving import with_masses
     from converter_calc.reporting.phosphorus_tables import (
         flux_choice_text,
         flux_mixes_text,
@@ -148,9 +160,13 @@ def fluxes(
         records,
     )
 
+    extra = _masses(added)
     heats = as_heats(heat)
+    check_materials(heats, list(extra))
+    heats = with_masses(heats, extra)
     limits = FluxLimits(fluorspar_kg_per_t=fluorspar, recycled_P_kg_per_t=recycled_p)
-    names = [name.strip() for name in materials.split(",")] if materials else None
+    names = [name.strip() for name in materials.split(",")] if materials else list(CANDIDATES)
+    names = [name for name in names if name not in extra]
     choice = None
     try:
         choice = choose_fluxes(heats, names, limits, steel_value)
@@ -241,6 +257,22 @@ def shares(
     document = {"heat_id": found.ids[0], "elements": found.document()}
     if not write_json(document, json_to):
         click.echo(shares_text(found), nl=False)
+
+
+def _masses(given: tuple[str, ...]) -> dict[str, float]:
+    """Masses [kg] from texts like "recycled_slag=2000"."""
+    found: dict[str, float] = {}
+    for text in given:
+        name, _, number = text.partition("=")
+        try:
+            kg = float(number)
+        except ValueError:
+            kg = -1.0
+        if not 0.0 <= kg < MOST_ADDED_KG:
+            message = f"must be MATERIAL=KG with 0 kg or more, given {text!r}"
+            raise InputError([Fault("--add", message)])
+        found[name.strip()] = kg
+    return found
 
 
 COMMANDS: tuple[click.Command, ...] = (phosphorus, lime, fluxes, practices, slag, shares)

@@ -14,7 +14,9 @@ from converter_calc.commands.shared import JSON, guarded, write_json
 @click.command()
 @click.argument("log", type=click.Path(path_type=Path))
 @click.option("--shop", type=click.Path(path_type=Path), required=True, help="Shop file.")
-@click.option("--out", type=click.Path(path_type=Path), required=True, help="Parquet file to write.")
+@click.option(
+    "--out", type=click.Path(path_type=Path), required=True, help="Parquet file to write."
+)
 @click.option("--tuned", type=click.Path(path_type=Path), help="Tuned parameters of the shop.")
 @click.option("--refused", type=click.Path(path_type=Path), help="CSV file for rows not taken.")
 @click.option(

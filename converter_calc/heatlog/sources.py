@@ -110,16 +110,20 @@ def check_headings(names: list[str], place: Any) -> None:
 
 
 def frame_part(frame: pd.DataFrame) -> Iterator[Part]:
-    """A DataFrame as one part; numeric columns stay arrays."""
+    """A DataFrame as one part; numbers and times stay arrays."""
+    import pyarrow as pa
+
     names = [str(name).strip() for name in frame.columns]
     check_headings(names, "table")
     columns: dict[str, Any] = {}
     for place, name in enumerate(names):
         series = frame.iloc[:, place]
-        if series.dtype == object or series.dtype.kind not in "fiu":
-            columns[name] = series.tolist()
-        else:
+        if series.dtype != object and series.dtype.kind in "fiu":
             columns[name] = series.to_numpy(dtype=float, na_value=np.nan)
+        elif series.dtype.kind == "M":
+            columns[name] = pa.Array.from_pandas(series)
+        else:
+            columns[name] = series.tolist()
     yield Part(columns, np.array(frame.index, dtype=object), index=frame.index)
 
 
@@ -131,7 +135,7 @@ def csv_heading(path: Path) -> tuple[list[str], str, str, int]:
     with path.open("rb") as file:
         raw = file.read(MOST_HEADING_BYTES)
     wide = raw[:2] in (b"\xff\xfe", b"\xfe\xff")
-    encoding = "utf-16" if wide else "utf8"
+    encoding = "utf-16" if wide else "utf-8-sig"  # decoded before rows are told apart
     text = raw.decode("utf-16" if wide else "utf-8-sig", errors="replace")
     lines = re.split("\r\n|\r|\n", text)
     above = next((k for k, line in enumerate(lines) if line.strip()), None)

@@ -31,6 +31,7 @@ from converter_calc.learning.streaming import (
     write_tables,
 )
 from converter_calc.learning.tuned import Tuned
+from converter_calc.learning.tuning import SHARED_ERROR
 from converter_calc.learning.tuning_equations import NormalEquations, Point
 
 if TYPE_CHECKING:
@@ -159,6 +160,7 @@ def tune_on_cluster(
     *,
     only: Sequence[str] = (),
     without: Sequence[str] = (),
+    shared_error: float = SHARED_ERROR,
     rows: int = ROWS,
     folder: Path | None = None,
     progress: Progress | None = None,
@@ -179,7 +181,9 @@ def tune_on_cluster(
             total: NormalEquations = sum(others, start=first)
             return total
 
-        tuned = tune_parts(parts, document, only, without, accumulate=accumulate)
+        tuned = tune_parts(
+            parts, document, only, without, shared_error=shared_error, accumulate=accumulate
+        )
     return tuned, refused
 
 

@@ -138,7 +138,8 @@ def replay(
 
     Parameters
     ----------
-    log : heat log (columns as `heatlog.columns`), or one that `read_heats` has made ready.
+    log : heat log (columns as `heatlog.columns`), or one that `read_heats` has made ready. Blank
+    times of waiting and blowing are those of the shop; a blank mass makes a heat unusable.
     shop : shop file or its content. values : parameters by flat name, put in place of those of
     the shop: a number, or one for each row (n,). jacobian_of : parameters to take derivatives
     by. tries : heats that had no answer in so many replays of the same HeatLog are not tried

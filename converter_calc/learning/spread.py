@@ -47,7 +47,7 @@ from converter_calc.planning.plan import (
     predict_heats,
     raise_unless_solved,
 )
-from converter_calc.planning.solving import complete_charge, solve_heats, with_values
+from converter_calc.planning.solving import complete_charge, with_values
 
 PREDICT = Ask(end="root_C", heat="T_K")
 #: Draws planned anew for the charge needed: such a plan costs three times a prediction.
@@ -247,7 +247,8 @@ def planned_heat(heat: Any, *, charged: bool) -> Outcome:
 def charge_of(planned: Outcome) -> tuple[HeatTable, dict[str, Array]]:
     """The recipe as a complete charge, its end free, and the solution of its prediction.
 
-    A pinned end temperature becomes the aim, and the heat loss found with it is kept.
+    A pinned end temperature becomes the aim, and the heat loss found with it is kept. The
+    prediction of a charge just planned ends where the plan does, so nothing is solved again.
     """
     charge = complete_charge(planned)
     pin = charge.values["pin_end_temp_C"]
@@ -259,7 +260,11 @@ def charge_of(planned: Outcome) -> tuple[HeatTable, dict[str, Array]]:
             aim_temp_C=np.where(np.isfinite(pin), pin, charge.values["aim_temp_C"]),
             pin_heat_loss_MJ=np.where(np.isfinite(pin), loss, charge.values["pin_heat_loss_MJ"]),
         )
-    return charge, solve_heats(charge, PREDICT).x
+    s, n = planned.state, planned.n
+    end: dict[str, Any] = {"metal_kg": s.metal_kg, "slag_kg": s.slag_kg, "T_K": s.T_K}
+    end |= {"f_Mn": planned.x["f_Mn"], "f_P": planned.x["f_P"], "root_C": s.C_pct**-0.5}
+    x = {name: np.array(np.broadcast_to(end[name], (n,)), dtype=float) for name in PREDICT.unknowns}
+    return charge, x
 
 
 def _needed(planned: Outcome, model: ErrorModel, seed: int) -> Draws:

@@ -127,15 +127,12 @@ def margin(
         raise InputError([Fault("margin", "needs a heat that is planned; this charge is given")])
     shifts = tuple(_shift_of(found, window, probability) for window in found.windows)
     aims = {name: float(planned.heats.values[name][0]) for name in LEVERS.values()}
-    moves = {
-        s.window.name: s.shift
-        if s.shift is not None
-        else s.best_shift * (s.best > s.now + WORTH_A_MOVE)
-        for s in shifts
-    }
+    moves = {s.window.name: _first_move(s) for s in shifts}
     if not any(moves.values()):
         return Margin(probability, shifts, aims, _reached(found, probability), found, planned)
-    checked, last, stop = found, planned, None
+    checked, last = found, planned
+    stop: InfeasibleError | None = None
+    touched: set[str] = set()
     for _ in range(ROUNDS):
         wanted = aims | {
             LEVERS[name]: checked.results[name].as_read + move
@@ -143,67 +140,71 @@ def margin(
             if move
         }
         try:
-            last = _planned(found, wanted)
+            last, aims, stop = _planned(planned, wanted)
         except InfeasibleError as error:
-            near = error.nearest.get("end_P_pct", 0.0)
-            if stop is not None or near <= wanted["aim_P_pct"]:
-                return Margin(
-                    probability,
-                    shifts,
-                    wanted,
-                    reached=False,
-                    checked=None,
-                    planned=None,
-                    binding=error.binding or str(error),
-                    frees=tuple(error.frees),
-                )
-            # as far as phosphorus goes, and the others as wanted
-            stop, wanted = error, wanted | {"aim_P_pct": near * JUST_REACHED}
-            try:
-                last = _planned(found, wanted)
-            except InfeasibleError:
-                last, wanted = planned, aims
-        aims = wanted
+            why, frees = error.binding or str(error), tuple(error.frees)
+            return Margin(
+                probability, shifts, wanted, reached=False, checked=None, planned=None,
+                binding=why, frees=frees,
+            )  # fmt: skip
         checked = spread(last, draws, found.seed, extra=extra, needs=False, windows=found.windows)
-        if stop is not None or _settled(shifts, checked, probability):
-            break
+        touched |= {name for name, move in moves.items() if move}
         moves = {
-            s.window.name: _again(s, checked, probability) if moves[s.window.name] else 0.0
+            s.window.name: _next_move(s, checked, probability, moved=s.window.name in touched)
             for s in shifts
         }
-        if not any(moves.values()):
+        if stop is not None or not any(moves.values()):
             break
-    return Margin(
-        probability, shifts, aims, _reached(checked, probability), checked, last,
-        stop.binding if stop else "", tuple(stop.frees) if stop else (),
-    )  # fmt: skip
+    binding, frees = (stop.binding, tuple(stop.frees)) if stop else ("", ())
+    reached = _reached(checked, probability)
+    return Margin(probability, shifts, aims, reached, checked, last, binding, frees)
 
 
-def _planned(found: Spread, aims: dict[str, float]) -> Outcome:
-    heats = with_values(found.planned.heats, **aims)
-    outcome = plan_heats(heats)[0][1]
-    raise_unless_solved(outcome)
-    return outcome
+def _planned(
+    planned: Outcome, aims: dict[str, float]
+) -> tuple[Outcome, dict[str, float], InfeasibleError | None]:
+    """The heat planned with other aims: as far as phosphorus goes, where it stops short.
+
+    Returns plan, the aims it has, and the error of the plan wanted where that cannot be made.
+    Raises InfeasibleError where no plan near it can.
+    """
+
+    def attempt(wanted: dict[str, float]) -> Outcome:
+        outcome = plan_heats(with_values(planned.heats, **wanted))[0][1]
+        raise_unless_solved(outcome)
+        return outcome
+
+    try:
+        return attempt(aims), aims, None
+    except InfeasibleError as error:
+        near = error.nearest.get("end_P_pct", 0.0)
+        if not near > aims["aim_P_pct"]:
+            raise
+        nearer = aims | {"aim_P_pct": near * JUST_REACHED}
+        return attempt(nearer), nearer, error
 
 
 def _reached(found: Spread, probability: float) -> bool:
     return all(c.probability >= probability - NEAR for c in found.chances)
 
 
-def _settled(shifts: tuple[Shift, ...], checked: Spread, probability: float) -> bool:
-    """Whether every window that can reach the probability has it, and not much more."""
-    chances = {c.name: c.probability for c in checked.chances}
-    return all(
-        abs(chances[s.window.name] - (probability if s.shift else s.best)) <= NEAR
-        for s in shifts
-        if (s.shift or s.best_shift) and s.shift != 0.0
-    )
+def _first_move(shift: Shift) -> float:
+    """The move that reaches the probability, else the best one where it is worth a move."""
+    if shift.shift is not None:
+        return shift.shift
+    return shift.best_shift if shift.best > shift.now + WORTH_A_MOVE else 0.0
 
 
-def _again(shift: Shift, checked: Spread, probability: float) -> float:
-    """Move that is still missing: from the draws of the new plan."""
-    now = _shift_of(checked, shift.window, probability, from_either_side=True)
-    return now.best_shift if now.shift is None else now.shift
+def _next_move(shift: Shift, checked: Spread, probability: float, *, moved: bool) -> float:
+    """Move that is still missing after a new plan; one aim moved may spoil another window.
+
+    moved : the aim was moved before, so it may have gone too far.
+    """
+    name = shift.window.name
+    chance = next(c.probability for c in checked.chances if c.name == name)
+    if abs(chance - probability) <= NEAR or (chance > probability and not moved):
+        return 0.0
+    return _first_move(_shift_of(checked, shift.window, probability, from_either_side=moved))
 
 
 def _shift_of(

@@ -220,6 +220,4 @@ def fit_chaos(
 
 def _solved(table: Array, y: Array) -> Array:
     """Least squares by the normal equations: the polynomials are orthonormal, so well set."""
-    from scipy.linalg import cho_factor, cho_solve
-
-    return np.asarray(cho_solve(cho_factor(table.T @ table), table.T @ y))
+    return np.linalg.solve(table.T @ table, table.T @ y)

@@ -22,7 +22,6 @@ from converter_calc.basis.dual import Array
 from converter_calc.basis.tolerances import (
     FOLLOWED_STEPS,
     POLISHED,
-    RECORDED_FROM,
     RESIDUAL_STALLED,
 )
 
@@ -47,32 +46,37 @@ def solve_draws(
     solver; otherwise it stays unsolved.
     """
     n = p.n
-    if n < RECORDED_FROM:
-        solved = solve_ask(p, ask)
-        return solved.unknowns, solved.converged
     system = System(p, ask, Memory().recorded)
     names = list(ask.unknowns)
     unit = units_of(p, names)
     inverse = _inverse_at(system, {name: heat[name] for name in names}, unit)
-    size = max(FOLLOWED, FOLLOWED_A_TERM * (1 + len(z) + len(names) * (len(names) + 1) // 2))
-    rows = np.unique(np.linspace(0, n - 1, min(size, n)).astype(int))
-    start = {name: np.full(rows.size, float(heat[name][0])) for name in names}
-    some = {name: _cut(size, rows) for name, size in unit.items()}
-    x, left = follow(system, start, some, inverse, rows, FAR_STEPS)
-    good = left <= GOOD
-    if np.count_nonzero(good) < size // 2:
-        solved = solve_ask(p, ask)
-        return solved.unknowns, solved.converged
-    answers = np.stack([x[name][good] / _cut(some[name], good) for name in names], axis=1)
-    guess = _fitted(z[:, rows[good]], answers, z)
-    begin = {name: guess[k] * unit[name] for k, name in enumerate(names)}
+
+    def followed(start: Unknowns, rows: Array, steps: int) -> tuple[Unknowns, Array]:
+        some = {name: _cut(size, rows) for name, size in unit.items()}
+        return follow(system, start, some, inverse, rows, steps)
+
+    def from_heat(rows: Array) -> Unknowns:
+        return {name: np.full(rows.size, float(heat[name][0])) for name in names}
+
     everything = np.arange(n)
-    x, left = follow(system, begin, unit, inverse, everything, FOLLOWED_STEPS)
+    size = max(FOLLOWED, FOLLOWED_A_TERM * (1 + len(z) + len(names) * (len(names) + 1) // 2))
+    if n <= size:
+        x, left = followed(from_heat(everything), everything, FAR_STEPS)
+    else:
+        rows = np.unique(np.linspace(0, n - 1, size).astype(int))
+        x, left = followed(from_heat(rows), rows, FAR_STEPS)
+        good = left <= GOOD
+        if np.count_nonzero(good) < size // 2:
+            solved = solve_ask(p, ask)
+            return solved.unknowns, solved.converged
+        answers = np.stack([(x[k] / _cut(unit[k], rows))[good] for k in names], axis=1)
+        guess = _fitted(z[:, rows[good]], answers, z)
+        begin = {name: guess[k] * unit[name] for k, name in enumerate(names)}
+        x, left = followed(begin, everything, FOLLOWED_STEPS)
     missed = np.flatnonzero(left > POLISHED)
     if missed.size:  # afresh from where they stand, without the steps remembered
         start = {name: x[name][missed] for name in names}
-        some = {name: _cut(size, missed) for name, size in unit.items()}
-        again, left[missed] = follow(system, start, some, inverse, missed, FAR_STEPS)
+        again, left[missed] = followed(start, missed, FAR_STEPS)
         for name in names:
             x[name][missed] = again[name]
     converged = left <= RESIDUAL_STALLED

@@ -16,7 +16,7 @@ from converter_calc.learning.spread_shares import Chaos, fit_chaos
 SHARES_DRAWS = 4096
 #: Degree of the polynomials of the shares, and the share of every variance below which a random
 #: number is given no products of two, and of three, with others.
-DEGREE, MINOR = 3, (0.003, 0.02)
+DEGREE, MINOR = 3, (0.003, 0.05)
 
 
 @dataclass(frozen=True)

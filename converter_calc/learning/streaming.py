@@ -27,14 +27,16 @@ from converter_calc.learning.parameters import ParameterSet, parameter_set
 from converter_calc.learning.replay import HeatLog, read_heats, replay
 from converter_calc.learning.replay_quantities import quantities
 from converter_calc.learning.tuned import Tuned, load_tuned
-from converter_calc.learning.tuning import report, search, summed
+from converter_calc.learning.tuning import SHARED_ERROR, report, search, summed
 from converter_calc.learning.tuning_equations import NormalEquations, Point, normal_equations
 
 if TYPE_CHECKING:
     import pandas as pd
 
-#: Heats of a long log that tell where its search may start.
-SAMPLE = 4096
+#: Heats that tell where the search may start, for a log so many times as long.
+SAMPLE, MUCH_LONGER = 4096, 4
+#: Parts that are kept in memory between passes, some 10 MB each; the others are read anew.
+HELD = 16
 SOLVED, INCOMPLETE, NO_ANSWER = "solved", "charge incomplete", "no answer"
 
 #: Told how many heats are done; may raise to stop the work.
@@ -263,18 +265,22 @@ def tune_file(
     *,
     only: Sequence[str] = (),
     without: Sequence[str] = (),
+    shared_error: float = SHARED_ERROR,
     rows: int = ROWS,
     refused_to: str | Path | None = None,
     progress: Progress | None = None,
 ) -> tuple[Tuned, Refused]:
-    """Parameters of a shop from a heat log of any length; the answer is that of `tune`.
+    """Parameters of a shop from a heat log of any length, as `tune`.
 
     The log is checked once and cut into parts on disk; each pass of the search reads them one
-    at a time and adds up their normal equations. A sample tells where to start.
+    at a time and adds up their normal equations. For a long log a sample tells where to start;
+    the scatter then settles a little elsewhere, which moves parameters by less than a fifth of
+    their standard errors.
 
     Parameters
     ----------
-    log : CSV or Parquet file. shop : shop file or its content. only, without : as in `tune`.
+    log : CSV or Parquet file. shop : shop file or its content. only, without, shared_error : as
+    in `tune`.
     rows : heats at a time. refused_to : CSV file for the rows that were no heats. progress :
     told how many heats were gone through, over all passes.
 
@@ -285,7 +291,10 @@ def tune_file(
     document = shop_document(shop)
     with tempfile.TemporaryDirectory(prefix="converter-log-") as folder:
         parts, refused = cut_log(log, Path(folder), document, rows=rows, refused_to=refused_to)
-        return tune_parts(parts, document, only, without, progress=progress), refused
+        found = tune_parts(
+            parts, document, only, without, shared_error=shared_error, progress=progress
+        )
+    return found, refused
 
 
 def tune_parts(
@@ -294,6 +303,7 @@ def tune_parts(
     only: Sequence[str] = (),
     without: Sequence[str] = (),
     *,
+    shared_error: float = SHARED_ERROR,
     accumulate: Callable[[Point], NormalEquations] | None = None,
     progress: Progress | None = None,
 ) -> Tuned:
@@ -309,15 +319,15 @@ def tune_parts(
     document = shop_document(shop)
     first = read_part(parts[0])
     entries = parameter_set(document, map(str, first.columns), only, without)
-    start = _start(parts, entries, document) if len(parts) > 1 else None
+    start = _start(parts, entries, document)
     sums = PartSums(parts, document, progress)
-    found = search(entries, accumulate or sums, start)
+    found = search(entries, accumulate or sums, start, shared_error=shared_error)
     faults, heats = sums.faults()
     return report(found, document, rows=heats, faults=faults)
 
 
 class PartSums:
-    """Sums over parts of a log that stay on disk.
+    """Sums over parts of a log, of which all but the first HELD stay on disk.
 
     Where each heat stood at the last pass is kept (some 60 bytes a heat), so that the next pass
     starts there.
@@ -328,6 +338,7 @@ class PartSums:
     ) -> None:
         self._parts, self._shop, self._progress = parts, dict(shop), progress
         self._stood: dict[Path, list[Any]] = {}
+        self._held: dict[Path, HeatLog] = {}
         self._done = 0
 
     def __call__(self, point: Point) -> NormalEquations:
@@ -344,11 +355,16 @@ class PartSums:
 
     def of(self, path: Path, point: Point) -> NormalEquations:
         """Sums of one part."""
-        log = read_heats(read_part(path), self._shop)
-        if path in self._stood:
-            log.resume(self._stood[path])
+        log = self._held.get(path)
+        if log is None:
+            log = read_heats(read_part(path), self._shop)
+            if path in self._stood:
+                log.resume(self._stood[path])
+            if len(self._held) < HELD:
+                self._held[path] = log
         sums = normal_equations(log, point)
-        self._stood[path] = log.stood()
+        if path not in self._held:
+            self._stood[path] = log.stood()
         self._done += log.n
         return sums
 
@@ -357,7 +373,7 @@ class PartSums:
         named: list[dict[str, Any]] = []
         heats = 0
         for path in self._parts:
-            log = read_heats(read_part(path), self._shop)
+            log = self._held.get(path) or read_heats(read_part(path), self._shop)
             found = log.faults.iloc[: MOST_NAMED - len(named)]
             rows = found.assign(row=found["row"].astype(int) + heats)
             named += rows.to_dict("records")  # type: ignore[arg-type]
@@ -368,9 +384,13 @@ class PartSums:
 def _start(
     parts: Sequence[Path], entries: ParameterSet, shop: Mapping[str, Any]
 ) -> dict[str, float] | None:
-    """Values that a sample of the log tells, spread evenly over its parts."""
+    """Values that a sample tells, spread evenly over the parts; None for a log not long."""
     import pandas as pd
+    from pyarrow import parquet
 
+    heats = sum(parquet.read_metadata(path).num_rows for path in parts)
+    if heats < MUCH_LONGER * SAMPLE:
+        return None
     each = -(-SAMPLE // len(parts))
     picked = []
     for path in parts:

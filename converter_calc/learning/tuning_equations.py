@@ -8,6 +8,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field, replace
+from functools import cache
 from typing import Any
 
 import numpy as np
@@ -148,6 +149,7 @@ class NormalEquations:
         return found
 
 
+@cache
 def _bin_centres() -> Array:
     """Residuals, in first guesses of the scatter, that the bins stand for, rising."""
     size = SMALLEST * (LARGEST / SMALLEST) ** ((np.arange(BINS) + 0.5) / BINS)

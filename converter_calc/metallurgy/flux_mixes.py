@@ -170,10 +170,19 @@ def mix_numbers(outcome: Outcome, pair: tuple[str, str]) -> dict[str, Any]:
     good = outcome.status[0] == "solved"
     return {
         "status": outcome.status[0],
-        "binding": outcome.binding[0],
+        "binding": _binding(outcome),
         "unpriced": ", ".join(unpriced(outcome.heats, kg)),
         **{name: float(spread(x, 1)[0]) if good else np.nan for name, x in values.items()},
     }
+
+
+def _binding(outcome: Outcome) -> str:
+    """What binds; where fuel was asked for in vain, why that can be so."""
+    text = outcome.binding[0]
+    if outcome.status[0] == "not converged" and outcome.ask.heat == "trim_kg":
+        fuel = outcome.heats.choices.fuel
+        text += f"; the flux that {fuel} asks for can take more heat than it gives: less scrap"
+    return text
 
 
 def unpriced(heats: HeatTable, charged: Mapping[str, Any]) -> list[str]:

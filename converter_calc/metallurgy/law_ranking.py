@@ -1,7 +1,8 @@
 """Which phosphorus law describes the shop's own heats best.
 
 A law is judged by the end phosphorus that it gives, from the measured slag and temperature, for
-heats that its approach factor was not fitted to.
+heats that its approach factor was not fitted to. The CaO of a slag sample holds lime that did
+not dissolve too, so the factor makes up for that as well.
 """
 
 from __future__ import annotations

@@ -234,6 +234,8 @@ def _columns(outcome: Outcome, step_pct: float) -> dict[str, Any]:
         slopes = _slopes(outcome, np.flatnonzero(good))
     for key in QUANTITIES:
         found["d_" + key] = -slopes[key] * step_pct
+    for key in ("materials_cost", "cost_per_t"):  # no price has no slope either
+        found["d_" + key] = np.where(np.isfinite(found["cost_per_t"]), found["d_" + key], np.nan)
     found["d_cost"] = found["d_cost_per_t"] * spread(s.steel_kg, n) * 1e-3
     numbers = {name: np.where(good, column, np.nan) for name, column in found.items()}
     return {

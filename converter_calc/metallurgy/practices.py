@@ -8,7 +8,7 @@ steady state of such heats. pretreated : hot metal treated for Si, P and S befor
 from __future__ import annotations
 
 from collections.abc import Callable, Iterable
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -25,9 +25,8 @@ from converter_calc.metallurgy.practices_chain import (
     handover_of,
     named,
     part_of,
-    practice_columns,
-    stage_rows,
 )
+from converter_calc.metallurgy.practices_comparison import Comparison
 from converter_calc.metallurgy.practices_stages import (
     LIME_KEPT,
     METAL_KEPT,
@@ -38,103 +37,14 @@ from converter_calc.metallurgy.practices_stages import (
 )
 from converter_calc.metallurgy.practices_steady import steady_heats
 from converter_calc.planning.grading import with_grade_aims
-from converter_calc.planning.outcome import Caution, Outcome, at, spread
+from converter_calc.planning.outcome import Caution, Outcome, spread
 from converter_calc.planning.plan import as_heats, plan_heats
 from converter_calc.planning.solving import with_values
 
 if TYPE_CHECKING:
-    import pandas as pd
+    pass
 
 TO_SLAG_OFF, AFTER_SLAG_OFF = "to slag-off", "after slag-off"
-
-
-@dataclass
-class Comparison:
-    """Practices on the hot metal of n heats.
-
-    chains : by practice, (row numbers, chain) for heats that pose the same question.
-    """
-
-    heats: HeatTable
-    chains: dict[str, list[tuple[Array, Chain]]]
-
-    def chain(self, practice: str, index: int = 0) -> tuple[Chain, int]:
-        """The chain that holds a heat, and the place of the heat in it."""
-        for rows, chain in self.chains[practice]:
-            place = np.flatnonzero(rows == index)
-            if place.size:
-                return chain, int(place[0])
-        raise IndexError(f"no heat {index}")
-
-    def table(self) -> pd.DataFrame:
-        """A row for each heat and practice; columns as in `practice_columns`."""
-        import pandas as pd
-
-        parts = []
-        for practice, chains in self.chains.items():
-            for rows, chain in chains:
-                columns: dict[str, Any] = {
-                    "row": rows,
-                    "heat_id": [self.heats.ids[row] for row in rows.tolist()],
-                    "practice": practice,
-                    "status": chain.status,
-                    "binding": chain.binding,
-                }
-                parts.append(pd.DataFrame(columns | chain.numbers()))
-        order = list(self.chains)
-        whole = pd.concat(parts, ignore_index=True)
-        whole["place"] = whole["practice"].map({name: k for k, name in enumerate(order)})
-        whole = whole.sort_values(["row", "place"], ignore_index=True)
-        return whole.drop(columns=["row", "place"])
-
-    def document(self, index: int = 0) -> dict[str, Any]:
-        """One heat as plain numbers, ready for JSON."""
-        found: dict[str, Any] = {}
-        for practice in self.chains:
-            chain, i = self.chain(practice, index)
-            numbers = {name: _plain(x, i) for name, x in chain.numbers().items()}
-            found[practice] = {
-                "title": TITLES[practice],
-                "status": chain.status[i],
-                "binding": chain.binding[i],
-                "freed_by": chain.frees[i],
-                "numbers": numbers,
-                "stages": [
-                    {k: _plain(x, 0) for k, x in row.items()} for row in stage_rows(chain, i)
-                ],
-                "streams": [_stream(stream, i) for stream in chain.streams],
-                "closure": {
-                    name: _plain(closure.relative, i) for name, closure in chain.closures().items()
-                },
-                "handovers": [
-                    {"name": h.name, "worst": _plain(h.worst(), i)} for h in chain.handovers
-                ],
-                "warnings": chain.warnings(i),
-            }
-        columns = {
-            name: {"label": c.label, "unit": c.unit, "meaning": c.note}
-            for name, c in practice_columns().items()
-        }
-        return {"heat_id": self.heats.ids[index], "columns": columns, "practices": found}
-
-
-def _plain(x: Any, index: int) -> Any:
-    if isinstance(x, str):
-        return x
-    number = float(at(x, index))
-    return number if np.isfinite(number) else None
-
-
-def _stream(stream: Stream, index: int) -> dict[str, Any]:
-    return {
-        "name": stream.name,
-        "side": stream.side,
-        "kind": stream.kind,
-        "temperature_C": _plain(stream.temperature_C, index),
-        "mass_kg": _plain(stream.mass_kg, index),
-        "species_kg": {k: _plain(kg, index) for k, kg in stream.species_kg.items()},
-        "enthalpy_MJ": _plain(stream.enthalpy_J / MJ, index),
-    }
 
 
 def compare_practices(heat: Any, practices: Iterable[str] | None = None) -> Comparison:
@@ -174,7 +84,14 @@ def compare_practices(heat: Any, practices: Iterable[str] | None = None) -> Comp
 
 
 def _blocks(heats: HeatTable) -> Iterable[tuple[Array, HeatTable]]:
-    """Heats that give the same inputs of the practices."""
+    """Heats that give the same inputs of the practices.
+
+    With scrap by preference each heat alone: what one stage leaves of a stock is the heat's own.
+    """
+    if heats.choices.scrap_order:
+        for row in range(heats.n):
+            yield np.array([row]), heats.take([row])
+        return
     given = [heats.values[name] for name in ("slag_off_scrap_kg", "kept_slag_mass_kg")]
     key = np.isfinite(given[0]) + 2 * np.isfinite(given[1]).astype(int)
     for kind in np.unique(key):
@@ -241,12 +158,39 @@ def two_slags(heats: HeatTable, base: Outcome) -> Chain:
         cautions=_slag_off_cautions(first),
     )
     _short_of_flux(chain, second)
+    _over_the_whole(chain)
     for row, frees in enumerate(chain.frees):
         if chain.status[row] != "solved" and free:
             frees.insert(
                 0, "slag-off at another temperature or carbon (slag_off.temp_C, slag_off.C_pct)"
             )
     return chain
+
+
+def _over_the_whole(chain: Chain) -> None:
+    """Heats whose stages keep a limit each, but not together."""
+    checks = [
+        (
+            spread(chain.kind_kg("scrap"), chain.n),
+            chain.first.heats.values["limit_scrap_box_kg"],
+            "limit.scrap_box_kg: both stages take {have:.0f} kg of scrap, {most:.0f} are allowed",
+            "another scrap share, or a higher limit",
+        )
+    ]
+    for name, material in chain.first.heats.materials.items():
+        stock = material.stock_kg
+        if stock is not None and name in chain.first.charged_kg:
+            text = f"stock: both stages take {{have:.0f}} kg of {name}, {{most:.0f}} are at hand"
+            more = f"more {name} (materials.{name}.stock_kg)"
+            checks.append(
+                (spread(chain.charged_kg(name), chain.n), spread(stock, chain.n), text, more)
+            )
+    for have, most, text, frees in checks:
+        for row in np.flatnonzero(have > most * (1.0 + CLOSURE)).tolist():
+            if chain.status[row] == "solved":
+                chain.status[row] = "infeasible"
+                chain.binding[row] = text.format(have=have[row], most=most[row])
+                chain.frees[row] = [frees]
 
 
 def _short_of_flux(chain: Chain, second: Outcome) -> None:
@@ -398,10 +342,4 @@ PRACTICES: dict[str, Callable[[HeatTable, Outcome], Chain]] = {
     "two_slags": two_slags,
     "kept_slag": kept_slag_practice,
     "pretreated": pretreated,
-}
-TITLES = {
-    "one_slag": "one slag",
-    "two_slags": "two slags",
-    "kept_slag": "kept slag",
-    "pretreated": "pre-treated",
 }

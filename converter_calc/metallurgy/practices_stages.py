@@ -152,7 +152,14 @@ def after_slag_off(heats: HeatTable, first: Outcome, *, free_scrap: bool) -> Hea
         else:
             second.masses_kg[name] = np.full(n, np.nan)
     choices = replace(heats.choices, ask=None)
-    return replace(second, choices=choices, hm_pct=pct, returned=returned)
+    materials = dict(heats.materials)
+    if n == 1:  # materials are those of the table; see `practices._over_the_whole` for more heats
+        for name, kg in charged.items():
+            stock = materials[name].stock_kg
+            if stock is not None:
+                left = max(0.0, stock - float(np.ravel(kg)[0]))
+                materials[name] = replace(materials[name], stock_kg=left)
+    return replace(second, choices=choices, materials=materials, hm_pct=pct, returned=returned)
 
 
 def kept_slag(s: State, n: int, share: Any, temp_C: Any) -> dict[str, Array]:

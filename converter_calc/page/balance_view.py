@@ -2,12 +2,13 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from typing import Any
 
 import streamlit as st
 
 from converter_calc.page.markup import heading, note, put, rows_of, table_html
-from converter_calc.page.session import answer, guarded, theme
+from converter_calc.page.session import answer, guarded, kept, theme
 from converter_calc.planning.outcome import Outcome
 from converter_calc.reporting import charts, tables
 
@@ -42,14 +43,20 @@ def balance_view() -> None:
     guarded(lambda: _elements(outcome))
 
 
+def _figure(name: str, make: Callable[[str], Any]) -> Any:
+    """A figure of today's heat in the theme of the browser."""
+    shade = theme()
+    return kept(name, answer(), shade, lambda: make(shade))
+
+
 def _heat(outcome: Outcome) -> None:
     flows = tables.heat_flow_table(outcome)
     put(heading("Where the heat comes from and where it goes"))
     put("Heat above 25 °C; what takes heat stands on the right. Shares are of the heat supplied.")
-    figure = charts.heat_flow_figure(flows, theme())
+    figure = _figure("heat flow", lambda shade: charts.heat_flow_figure(flows, shade))
     show_figure(figure, "heat_flow", charts.heat_flow_text(flows))
     put(heading("Heat in and out"))
-    figure = charts.heat_bars_figure(flows, theme())
+    figure = _figure("heat bars", lambda shade: charts.heat_bars_figure(flows, shade))
     show_figure(figure, "heat_bars", charts.heat_bars_text(flows))
     terms = tables.heat_balance_table(outcome)
     terms = terms.sort_values("group", key=lambda names: names.map(GROUPS.index), kind="stable")
@@ -71,7 +78,7 @@ def _heat(outcome: Outcome) -> None:
 def _elements(outcome: Outcome) -> None:
     table = tables.element_balance_table(outcome)
     put(heading("Where each element goes"))
-    figure = charts.element_figure(table, theme=theme())
+    figure = _figure("elements", lambda shade: charts.element_figure(table, theme=shade))
     show_figure(figure, "elements", charts.element_text(table))
     places = [name for name in table.columns if name.startswith("to ")]
     rows = [

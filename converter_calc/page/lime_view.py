@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from functools import partial
 from typing import Any
 
 import numpy as np
@@ -14,9 +15,11 @@ from converter_calc.page.balance_view import show_figure
 from converter_calc.page.markup import fault_texts, heading, note, put, rows_of, table_html
 from converter_calc.page.numbers import number_text, parse_number
 from converter_calc.page.session import (
+    Answer,
     answer,
     form,
     guarded,
+    kept,
     replace_form,
     theme,
     view_field,
@@ -69,9 +72,12 @@ def _lime() -> None:
         kg = found.outcome.charged_kg.get(found.heats.choices.lime, 0.0)
         usual = max(float(at(kg, 0)), 1000.0)
     low, high = _range(0.5 * usual, 2.0 * usual)
-    curve, lines, effects = _worked_out(found.heats, low, high)
+    curve, lines, effects = _worked_out(found, found.heats, low, high)
     put(heading("End phosphorus against lime"))
-    show_figure(lime_figure(curve, lines, theme()), "lime_curve", lime_text(curve, lines))
+    shade = theme()
+    figure = kept("lime figure", found, (low, high, shade),
+                  lambda: lime_figure(curve, lines, shade))  # fmt: skip
+    show_figure(figure, "lime_curve", lime_text(curve, lines))
     _carry_back(lines)
     marks = [
         (row.line, "–" if np.isnan(row.lime_kg) else f"{row.lime_kg:,.0f}")
@@ -84,7 +90,9 @@ def _lime() -> None:
     put("Lime holds the basicity of the plan while one thing changes; the law is the chosen one.")
     for kind, table in effects.items():
         put(heading("Against " + EFFECTS[kind][1]))
-        show_figure(effect_figure(table, kind, theme()), "effect_" + kind, effect_text(table, kind))
+        figure = kept("effect", found, (kind, shade),
+                      partial(effect_figure, table, kind, shade))  # fmt: skip
+        show_figure(figure, "effect_" + kind, effect_text(table, kind))
         column, title = EFFECTS[kind]
         rows = [
             (f"{row[column]:,.4g}", f"{row['end_P_pct']:.4f}", f"{row['L_P']:.1f}",
@@ -117,16 +125,16 @@ def _range(low: float, high: float) -> tuple[float, float]:
     return ends[0], ends[1]
 
 
-def _worked_out(heats: HeatTable, low: float, high: float) -> tuple[Any, LimeLines, Any]:
-    key = (id(heats), low, high)
-    kept = st.session_state.get("cc_lime")
-    if kept is None or kept[0] != key:
+def _worked_out(
+    found: Answer, heats: HeatTable, low: float, high: float
+) -> tuple[Any, LimeLines, Any]:
+    def make() -> tuple[Any, LimeLines, Any]:
         with st.spinner("The curves are worked out"):
             curve = lime_curve(heats, np.linspace(low, high, POINTS))
-            kept = key, (curve, lime_lines(heats, curve), phosphorus_effects(heats)), heats
-        st.session_state["cc_lime"] = kept
-    found: tuple[Any, LimeLines, Any] = kept[1]
-    return found
+            return curve, lime_lines(heats, curve), phosphorus_effects(heats)
+
+    made: tuple[Any, LimeLines, Any] = kept("lime", found, (low, high), make)
+    return made
 
 
 def _carry_back(lines: LimeLines) -> None:

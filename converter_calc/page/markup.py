@@ -17,6 +17,7 @@ STYLE = """
   border-bottom: 1px solid color-mix(in srgb, currentColor 18%, transparent); font-weight: 400; }
 .cc-table thead th { font-weight: 600; font-size: .86rem; vertical-align: bottom; }
 .cc-table .n { text-align: right; white-space: nowrap; }
+.cc-table thead .n { white-space: normal; }
 .cc-large td.n:nth-of-type(1) { font-size: 1.6rem; font-weight: 600; line-height: 1.25; }
 .cc-large th[scope=row] { font-size: 1.05rem; }
 .cc-large tr.cc-part th { padding-left: 1.2rem; font-size: .95rem; }

@@ -183,6 +183,5 @@ def _warned(warnings: Iterable[dict[str, str]], place: str) -> Markup:
 
 def term_rows(terms: Iterable[tuple[str, float, str, str]]) -> list[tuple[str, ...]]:
     """Terms of an explanation as rows of text: label, value, unit, source."""
-    return [
-        (label, number(x), unit.replace("Nm3", "Nm³"), source) for label, x, unit, source in terms
-    ]
+    shown = {"Nm3": "Nm³", "Nm3 O2": "Nm³ O₂"}
+    return [(label, number(x), shown.get(unit, unit), source) for label, x, unit, source in terms]

@@ -20,6 +20,7 @@ from converter_calc.page.session import (
     Answer,
     answer,
     guarded,
+    kept,
     theme,
     view_choice,
     view_field,
@@ -64,7 +65,7 @@ def _scrap() -> None:
         "vessel, boxes, stocks or aims do not allow is shaded."
     )
     axes = _axes(found)
-    frame = _map(found.heats, axes)
+    frame = _map(found, found.heats, axes)
     columns = map_columns(found.heats)
     today = today_point(found.outcome) if found.outcome is not None else None
     with st.container(horizontal=True):
@@ -77,7 +78,10 @@ def _scrap() -> None:
     if not frame[quantity].notna().any():
         put(note("note", f"No {columns[quantity].label} to show; is a price or CO2 value missing?"))
     else:
-        figure = scrap_map_figure(frame, columns, quantity, today, silicon, theme())
+        shade = theme()
+        figure = kept("scrap figure", found, (repr(axes), quantity, silicon, shade),
+                      lambda: scrap_map_figure(frame, columns, quantity, today, silicon,
+                                               shade))  # fmt: skip
         text = scrap_map_text(frame, columns, quantity, today, silicon)
         show_figure(figure, "scrap_map", text)
         if columns[quantity].note:
@@ -130,20 +134,18 @@ def _end_label(name: str, end: str) -> str:
     return f"{what.get(name) or label_of(name)}, {end}"
 
 
-def _map(heats: HeatTable, axes: dict[str, list[float]]) -> pd.DataFrame:
-    """The map, worked out once for each heat and axes; kept in the session only."""
-    key = (id(heats), repr(axes))
-    kept = st.session_state.get("cc_scrap_map")
-    if kept is None or kept[0] != key:
+def _map(found: Answer, heats: HeatTable, axes: dict[str, list[float]]) -> pd.DataFrame:
+    """The map, worked out once for each heat and axes."""
+
+    def make() -> pd.DataFrame:
         with st.spinner("The map is worked out"):
             # the map gives the scrap share itself, whatever the heat asks for
             free = replace(heats, choices=replace(heats.choices, ask=None))
-            frame = scrap_ratio_map(free, axes["scrap_share_pct"], axes["hot_metal_temp_C"],
-                                    axes["hm_Si_pct"])  # fmt: skip
-        kept = key, frame, heats
-        st.session_state["cc_scrap_map"] = kept
-    found: pd.DataFrame = kept[1]
-    return found
+            return scrap_ratio_map(free, axes["scrap_share_pct"], axes["hot_metal_temp_C"],
+                                   axes["hm_Si_pct"])  # fmt: skip
+
+    frame: pd.DataFrame = kept("scrap map", found, repr(axes), make)
+    return frame
 
 
 def _grid_html(table: pd.DataFrame, name: str) -> Any:

@@ -8,11 +8,9 @@ from __future__ import annotations
 import copy
 import json
 import logging
-from collections import OrderedDict
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Callable, Hashable, Mapping, Sequence
 from dataclasses import dataclass, field
 from functools import cache
-from threading import Lock
 from typing import Any
 
 import streamlit as st
@@ -29,6 +27,7 @@ from converter_calc.data.tables import read_toml
 from converter_calc.page.address import VIEW, address_of, form_from, too_long, view_texts
 from converter_calc.page.form import Form, document_of, form_of
 from converter_calc.page.markup import fault_texts, note, put
+from converter_calc.page.store import Store
 from converter_calc.planning.outcome import Outcome
 
 LOG = logging.getLogger(__name__)
@@ -39,8 +38,8 @@ class Answer:
     """What the fields give: a document and an outcome, or why there is none.
 
     infeasible : the error of a valid heat that has no answer. heats : the heat as a table of
-    one, where the input is right. shown : its HTML, once made. Not to be changed otherwise:
-    sessions with the same fields share it.
+    one, where the input is right. asked : the question and the document as text. shown : its
+    HTML, once made. Not to be changed otherwise: sessions with the same fields share it.
     """
 
     document: dict[str, Any] | None = None
@@ -48,32 +47,13 @@ class Answer:
     outcome: Outcome | None = None
     faults: list[Fault] = field(default_factory=list)
     infeasible: InfeasibleError | None = None
+    asked: str = ""
     shown: str = ""
 
 
-class Answers:
-    """Answers used last, by what was asked; shared by the sessions of a server."""
-
-    def __init__(self, most: int) -> None:
-        self._kept: OrderedDict[str, Answer] = OrderedDict()
-        self._lock = Lock()
-        self._most = most
-
-    def find(self, asked: str, solve_it: Callable[[], Answer]) -> Answer:
-        """The answer to a question, from the store or worked out now."""
-        with self._lock:
-            if asked in self._kept:
-                self._kept.move_to_end(asked)
-                return self._kept[asked]
-        found = solve_it()
-        with self._lock:
-            self._kept[asked] = found
-            while len(self._kept) > self._most:
-                self._kept.popitem(last=False)
-        return found
-
-
-ANSWERS = Answers(most=64)
+ANSWERS: Store[Answer] = Store(most=64)
+#: Curves, maps and figures of the views.
+PICTURES: Store[Any] = Store(most=48)
 
 
 @cache
@@ -179,7 +159,22 @@ def answer() -> Answer:
         return Answer(faults=error.faults)
     question = form().question
     asked = question + json.dumps(document, sort_keys=True, default=str)
-    return ANSWERS.find(asked, lambda: solve(document, predict=question == "predict"))
+
+    def make() -> Answer:
+        made = solve(document, predict=question == "predict")
+        made.asked = asked
+        return made
+
+    return ANSWERS.find(asked, make)
+
+
+def kept(view: str, found: Answer, settings: Hashable, make: Callable[[], Any]) -> Any:
+    """What a view has worked out for an answer: made once for each heat and its settings.
+
+    view : a name of its own for each thing. settings : all else that it depends on, as the
+    theme of a figure. Shared with sessions that ask the same; not to be changed.
+    """
+    return PICTURES.find((view, found.asked, settings), make)
 
 
 def solve(document: Mapping[str, Any], *, predict: bool) -> Answer:

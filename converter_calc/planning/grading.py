@@ -19,11 +19,15 @@ from converter_calc.planning.ladle import FIRST_DROP_K, practice_of, tap_tempera
 from converter_calc.planning.outcome import Caution, Outcome, spread
 from converter_calc.planning.solving import plan_groups, solve_heats, with_values
 from converter_calc.planning.verdicts import mark_infeasible, still_open
+from converter_calc.tapping.tap_practice import named_additions
 
 #: Turns of planning and pouring, the change at which they end [K], and a drop beyond belief [K].
 TURNS = 6
 SETTLED_K = 1e-3
 MOST_DROP_K = 400.0
+#: Converter aims by all that they follow from, and how many are kept.
+_AIMS: dict[str, ConverterAim] = {}
+AIMS_KEPT = 64
 
 
 def aim_of(heats: HeatTable) -> ConverterAim | None:
@@ -33,7 +37,13 @@ def aim_of(heats: HeatTable) -> ConverterAim | None:
     """
     if not heats.grade:
         return None
-    return converter_aim(grade(heats.grade, heats.grades), practice_of(heats))
+    own = [heats.materials.get(name) for name in named_additions(heats.tap)]
+    key = repr((heats.grade, heats.grades, heats.tap, own))
+    if key not in _AIMS:  # asked several times a heat: for the aims, the scrap, the notes
+        if len(_AIMS) >= AIMS_KEPT:
+            _AIMS.clear()
+        _AIMS[key] = converter_aim(grade(heats.grade, heats.grades), practice_of(heats))
+    return _AIMS[key]
 
 
 def with_grade_aims(heats: HeatTable) -> HeatTable:

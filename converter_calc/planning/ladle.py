@@ -30,6 +30,9 @@ FIRST_DROP_K = 40.0
 TURNS = 12
 SETTLED_K = 1e-6
 NO_GRADE = Grade("no grade", "", "", {}, "none named", "", invented=True)
+#: Elements of a grade that the balance does not follow into the steel.
+NOT_CARRIED = ("N", "H")
+NOT_WORKED_OUT = "not worked out"
 #: Difference of a content from its limit that is rounding, relative.
 ROUNDING = 1e-7
 
@@ -120,9 +123,14 @@ class LadlePlan:
         return np.zeros(self.n) + self.poured.reduced.metal.get("P", 0.0)
 
     def mark(self, element: str, index: int) -> str:
-        """Where a content lies: below, near lower limit, inside, near upper limit, above."""
+        """Where a content lies: below, near lower limit, inside, near upper limit, above.
+
+        Gases that the balance does not carry are marked as not worked out.
+        """
         low, high = self.grade.limits.get(element, (None, None))
         kg = self.poured.steel.get(element)
+        if kg is None and element in NOT_CARRIED:
+            return NOT_WORKED_OUT
         x = 0.0 if kg is None else 100.0 * float(kg[index] / self.poured.steel_kg[index])
         return mark_of(x, low, high, self.practice.near_share)
 
@@ -205,14 +213,18 @@ def tap_case(outcome: Outcome, practice: TapPractice, killer: str) -> TapCase:
     )
 
 
-def ladle_of(outcome: Outcome) -> LadlePlan:
-    """The tap of all heats of an outcome: additions planned, ladle worked out.
+def ladle_of(outcome: Outcome, rows: Array | None = None) -> LadlePlan:
+    """The tap of heats of an outcome: additions planned, ladle worked out.
 
-    Heats that the outcome has not solved give NaN or nonsense; look at its status first.
+    rows : row numbers of the heats wanted, all if not given. A heat that is not solved has no
+    steel to tap: leave it out.
     """
     practice, steel_grade = practice_of(outcome.heats), grade_of(outcome.heats)
     case = tap_case(outcome, practice, killer_of(steel_grade, practice))
-    return plan_ladle(case, steel_grade, outcome.heats.ids)
+    ids = outcome.heats.ids
+    if rows is not None:
+        case, ids = case.take(rows), [ids[row] for row in rows.tolist()]
+    return plan_ladle(case, steel_grade, ids)
 
 
 def plan_ladle(case: TapCase, steel_grade: Grade, ids: list[str]) -> LadlePlan:
@@ -345,11 +357,15 @@ def _first_oxygen(case: TapCase, killer_pct: float, hard: Sequence[Want], T_K: A
 def tap_temperature_for(outcome: Outcome) -> Array:
     """Tap temperature [C] with which the ladle would be as warm as wanted, heat by heat.
 
-    To first order: the tap temperature less what the ladle misses. NaN where the practice
-    wants none.
+    To first order: the tap temperature plus what the ladle misses. NaN for a heat that is not
+    solved, and where the practice wants no ladle temperature.
     """
-    ladle = ladle_of(outcome)
-    return ladle.tap_temp_C + ladle.practice.ladle_temp_C - ladle.ladle_temp_C
+    found = np.full(outcome.n, np.nan)
+    rows = np.flatnonzero(outcome.converged)
+    if rows.size:
+        ladle = ladle_of(outcome, rows)
+        found[rows] = ladle.tap_temp_C + ladle.practice.ladle_temp_C - ladle.ladle_temp_C
+    return found
 
 
 def heat_lost_MJ(ladle: LadlePlan) -> Array:

@@ -9,7 +9,6 @@ import numpy as np
 from converter_calc.balance.heats import HeatTable, heats_from_frame
 from converter_calc.basis.errors import InfeasibleError
 from converter_calc.planning.ladle import LadlePlan, ladle_of
-from converter_calc.planning.outcome import Outcome
 from converter_calc.planning.plan import plan, plan_heats, predict, predict_heats
 from converter_calc.planning.tap_report import TapResult
 
@@ -43,11 +42,6 @@ def tap(heat: Any, shop: Any = None, *, predicted: bool = False) -> Any:
     return result
 
 
-def tap_outcomes(outcome: Outcome) -> LadlePlan:
-    """The ladle of all heats of an outcome, solved or not; see `ladle_of`."""
-    return ladle_of(outcome)
-
-
 def raise_unless_reached(ladle: LadlePlan, index: int = 0) -> None:
     """Raise InfeasibleError where no additions bring the heat into its grade."""
     if ladle.choice.feasible[index]:
@@ -72,15 +66,14 @@ def _tap_table(heats: HeatTable, index: Any, *, predicted: bool) -> Any:
     groups = predict_heats(heats) if predicted else plan_heats(heats)
     for rows, outcome in groups:
         found["status"][rows] = outcome.status
-        solved = np.array([status == "solved" for status in outcome.status], dtype=bool)
-        with np.errstate(all="ignore"):
-            ladle = ladle_of(outcome) if solved.any() else None
-        for name, values in ({} if ladle is None else ladle.columns()).items():
+        solved = np.flatnonzero([status == "solved" for status in outcome.status])
+        columns = ladle_of(outcome, solved).columns() if solved.size else {}
+        for name, values in columns.items():
             if name == "heat_id":
                 continue
             text = values.dtype == object
             if name not in found:
                 blank: Any = "" if text else np.nan
                 found[name] = np.full(heats.n, blank, dtype=object if text else float)
-            found[name][rows[solved]] = values[solved]
+            found[name][rows[solved]] = values
     return pd.DataFrame(found, index=index)

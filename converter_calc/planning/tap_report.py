@@ -14,7 +14,7 @@ from converter_calc.basis.units import MJ
 from converter_calc.data.tables import read_csv_rows
 from converter_calc.laws import deoxidation
 from converter_calc.planning.explain import Explanation, Term
-from converter_calc.planning.ladle import LadlePlan, heat_lost_MJ
+from converter_calc.planning.ladle import NOT_WORKED_OUT, LadlePlan, heat_lost_MJ
 from converter_calc.planning.outcome import Outcome, at
 from converter_calc.tapping.pouring import SILICON_LAW, bound_oxygen
 
@@ -133,14 +133,15 @@ def ladle_document(ladle: LadlePlan, index: int = 0) -> dict[str, Any]:
 
 def _limit(ladle: LadlePlan, element: str, index: int) -> dict[str, Any]:
     low, high = ladle.grade.limits[element]
+    mark = ladle.mark(element, index)
     kg = ladle.poured.steel.get(element)
     x = 0.0 if kg is None else 100.0 * float(kg[index] / ladle.poured.steel_kg[index])
     return {
         "element": element,
-        "pct": x,
+        "pct": None if mark == NOT_WORKED_OUT else x,
         "min_pct": low,
         "max_pct": high,
-        "mark": ladle.mark(element, index),
+        "mark": mark,
     }
 
 

@@ -2,15 +2,14 @@
 
 from __future__ import annotations
 
+import json
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-import numpy as np
-
 from converter_calc.basis.errors import Fault, InputError
-from converter_calc.heatlog.columns import material_names
+from converter_calc.heatlog.columns import in_order, material_names
 from converter_calc.heatlog.reading import ROWS_AT_ONCE, LogRead, fault_text, iter_log, read_log
 from converter_calc.heatlog.writing import write_log
 from converter_calc.register import opening
@@ -140,40 +139,49 @@ class Actuals(Database):
         heat_id : only of this heat. history : also what was corrected since, oldest first.
         """
         where = "(?1 IS NULL OR heat_id = ?1)" + ("" if history else " AND superseded_at IS NULL")
-        rows = self.rows(
-            "SELECT heat_id, content, actual_id, recorded_at, superseded_at, origin "  # noqa: S608
+        more = ["recorded_at", "superseded_at", "origin"] if history else ["recorded_at"]
+        return self._frame(
+            f"SELECT heat_id, content, {', '.join(more)} "  # noqa: S608
             f"FROM actuals WHERE {where} ORDER BY actual_id",
             (heat_id,),
+            more,
         )
-        contents = from_json(row[1] for row in rows)
-        frame = frame_of([row[0] for row in rows], contents)
-        frame["recorded_at"] = np.array([row[3] for row in rows], dtype=object)
-        if history:
-            frame["superseded_at"] = np.array([row[4] for row in rows], dtype=object)
-            frame["origin"] = np.array([row[5] for row in rows], dtype=object)
-        return frame
+
+    def _frame(self, query: str, given: Sequence[Any], more: Sequence[str] = ()) -> pd.DataFrame:
+        """Rows of (heat, content, more ...) as a heat log, made in pieces to bound the memory."""
+        import pandas as pd
+
+        pieces: list[pd.DataFrame] = []
+        with opening.told(self.path):
+            cursor = self.db.execute(query, given)
+            while rows := cursor.fetchmany(ROWS_AT_ONCE):
+                piece = frame_of([row[0] for row in rows], from_json(row[1] for row in rows))
+                for place, name in enumerate(more, start=2):
+                    piece[name] = pd.Series([row[place] for row in rows], dtype=object)
+                pieces.append(piece)
+        if not pieces:
+            empty = frame_of([], [])
+            return empty.assign(**{name: pd.Series([], dtype=object) for name in more})
+        if len(pieces) == 1:
+            return pieces[0]
+        frame = pd.concat(pieces, ignore_index=True)
+        return frame[[*in_order(set(frame.columns) - set(more)), *more]]
 
     def log_frame(self) -> pd.DataFrame:
         """All actuals as a heat log in the order of tapping; aims not logged are the plan's."""
-        rows = self.rows(
-            "SELECT heat_id, content FROM actuals WHERE superseded_at IS NULL ORDER BY actual_id"
+        frame = self._frame(
+            "SELECT heat_id, content FROM actuals WHERE superseded_at IS NULL ORDER BY actual_id",
+            (),
         )
-        contents = from_json(content for _, content in rows)
-        frame = frame_of([name for name, _ in rows], contents)
         planned = self.rows(
             "SELECT heat_id, planned FROM plans WHERE plan_id IN "
             "(SELECT max(plan_id) FROM plans GROUP BY heat_id)"
         )
-        frame = with_plan_aims(
-            frame,
-            dict(
-                zip(
-                    (name for name, _ in planned),
-                    from_json(text for _, text in planned),
-                    strict=True,
-                )
-            ),
-        )
+        aims = {
+            name: {aim: x for aim, x in json.loads(text).items() if aim.startswith("aim_")}
+            for name, text in planned
+        }
+        frame = with_plan_aims(frame, aims)
         return frame.sort_values("tapped_at", kind="stable", ignore_index=True)
 
     def import_log(

@@ -13,6 +13,8 @@ from pathlib import Path
 from converter_calc.basis.errors import Fault, InputError
 from converter_calc.register.schema import APPLICATION_ID, SCHEMA_VERSION, STEPS, TABLES
 
+#: What to do with a damaged file; an old write-ahead log beside a backup would damage that too.
+_REMEDY = "move it and its -wal and -shm files away, put a backup in its place"
 #: How long a writer waits for another one, s.
 BUSY_SECONDS = 30.0
 #: Layout of the header: SQLite file format, section 1.3, https://www.sqlite.org/fileformat2.html
@@ -45,7 +47,7 @@ def _sentence(error: sqlite3.Error) -> str:
     if "locked" in text or "busy" in text:
         return f"is busy: another program was writing for {BUSY_SECONDS:.0f} s; try again"
     if "malformed" in text or "not a database" in text or "corrupt" in text:
-        return f"is damaged ({text}); put a backup in its place"
+        return f"is damaged ({text}); {_REMEDY}"
     if "readonly" in text or "unable to open" in text:
         return f"cannot be opened for writing ({text})"
     if "full" in text:
@@ -115,7 +117,7 @@ def _check_header(path: Path) -> None:
     waiting = log.exists() and log.stat().st_size > 0
     size = path.stat().st_size
     if not waiting and (size < number(28) * page or size % max(page, 1)):
-        message = f"is cut short: {size} of {number(28) * page} bytes; put a backup in its place"
+        message = f"is cut short: {size} of {number(28) * page} bytes; {_REMEDY}"
         raise refuse(path, message)
 
 
@@ -143,7 +145,7 @@ def _prepare(connection: sqlite3.Connection, path: Path) -> None:
         raise refuse(path, "is a database of another program, not a register")
     if version and not TABLES[version] <= tables:
         lacks = ", ".join(sorted(TABLES[version] - tables))
-        raise refuse(path, f"is damaged: it lacks the tables {lacks}; put a backup in its place")
+        raise refuse(path, f"is damaged: it lacks the tables {lacks}; {_REMEDY}")
     if version < SCHEMA_VERSION:
         if version:
             backup_before_migration(connection, path, version)

@@ -21,6 +21,8 @@ if TYPE_CHECKING:
 
 WIDTH = 100
 TON_CAUTION = "A calculation, not an instruction: the shop's own practice and its engineers decide."
+#: Lime that differs by less is the same lime: the least basicity sets it either way.
+STILL_KG = 2.0
 EASED = {"phosphorus": "0.001 %", "basicity": "0.1", "magnesia": "1 %"}
 
 
@@ -90,7 +92,8 @@ def laws_compared_text(compared: LawsCompared, heat: int = 0) -> str:
             )
             continue
         low, high = _number(row.lime_low_kg, 0), _number(row.lime_high_kg, 0)
-        between = "" if math.isnan(row.scatter_log10) else f"{low} to {high}"
+        moves = not abs(row.lime_high_kg - row.lime_low_kg) < STILL_KG
+        between = "" if math.isnan(row.scatter_log10) else f"{low} to {high}" if moves else "as is"
         body.append([
             mark + row.law, _number(row.lime_kg, 0), between, _number(row.lime_for_P_kg, 0),
             _number(row.slag_kg, 0), _number(row.iron_to_slag_kg, 0), _number(row.oxygen_Nm3, 0),
@@ -245,6 +248,8 @@ def flux_mixes_text(mixes: FluxMixes) -> str:
     )
     lines += [line for row in _rows(table) if row.binding
               for line in _wrapped(f"! {row.lime} + {row.magnesia}: {row.binding}")]  # fmt: skip
+    if any("fluorspar" in outcome.charged_kg for outcome in mixes.outcomes.values()):
+        lines += _wrapped("! " + CAUTION)
     missing = sorted({name for text in table["unpriced"] for name in text.split(", ") if name})
     if missing:
         lines += _wrapped(f"- no price, so no cost: {', '.join(missing)}")

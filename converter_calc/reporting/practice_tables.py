@@ -9,8 +9,8 @@ from typing import Any
 import numpy as np
 
 from converter_calc.metallurgy.element_shares import ElementShares
-from converter_calc.metallurgy.practices import TITLES, Comparison
 from converter_calc.metallurgy.practices_chain import SAID_ONCE, practice_columns, stage_rows
+from converter_calc.metallurgy.practices_comparison import TITLES, Comparison
 from converter_calc.metallurgy.slag_product import SlagProduct
 from converter_calc.planning.outcome import at
 

@@ -130,7 +130,8 @@ def _ladle(told: dict[str, Any], show: Display) -> list[str]:
         low, high = (None, None) if row is None else (row["min_pct"], row["max_pct"])
         sides = "".join(f"{'' if side is None else f'{side:g}':>10}" for side in (low, high))
         mark = "" if row is None else row["mark"]
-        lines.append(f"  [{element + ']':<5}{x:>10.4f}{sides}   {mark}".rstrip())
+        shown_pct = f"{x:.4f}" if row is None or row["pct"] is not None else "-"
+        lines.append(f"  [{element + ']':<5}{shown_pct:>10}{sides}   {mark}".rstrip())
     lines.append(f"  phosphorus given back by the slag {told['phosphorus_returned_pct']:.4f} %")
     lines.append(f"  {'steel in the ladle':<30}{_mass(told['steel_kg'], show):>12} {show.mass}")
     return [*lines, ""]

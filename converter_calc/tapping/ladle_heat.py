@@ -117,8 +117,9 @@ def _liquid_J(poured: Poured, T_K: Array) -> Array:
 
 
 def _available_J(case: TapCase, into: list[Stream], poured: Poured, lost: Array) -> Array:
-    gas = poured.gas["CO"] * enthalpy_J_kg("CO", case.T_K)
-    return sum((s.enthalpy_J for s in into), np.zeros(case.n)) - gas - lost
+    entering: Array = sum((s.enthalpy_J for s in into), np.zeros(case.n))
+    gas: Array = poured.gas["CO"] * enthalpy_J_kg("CO", case.T_K)
+    return entering - gas - lost
 
 
 def ladle_T_K(case: TapCase, poured: Poured, into: list[Stream] | None = None) -> Array:
@@ -127,7 +128,8 @@ def ladle_T_K(case: TapCase, poured: Poured, into: list[Stream] | None = None) -
     into : the streams that enter, if they are at hand.
     """
     into = _streams_in(case, poured) if into is None else into
-    available = _available_J(case, into, poured, sum(losses_J(case).values()))
+    lost = sum(losses_J(case).values(), np.zeros(case.n))
+    available = _available_J(case, into, poured, lost)
     T = case.T_K - 25.0
     slope = _liquid_J(poured, T + 0.5) - _liquid_J(poured, T - 0.5)
     for _ in range(NEWTON_STEPS):
@@ -143,7 +145,8 @@ def ladle_heat(case: TapCase, poured: Poured) -> LadleHeat:
     into = _streams_in(case, poured)
     losses = losses_J(case)
     T, T_tap = ladle_T_K(case, poured, into), case.T_K
-    available = _available_J(case, into, poured, sum(losses.values()))
+    lost = sum(losses.values(), np.zeros(case.n))
+    available = _available_J(case, into, poured, lost)
 
     def liquid(T_K: Array) -> Array:
         return _liquid_J(poured, T_K)
@@ -156,7 +159,7 @@ def ladle_heat(case: TapCase, poured: Poured) -> LadleHeat:
         (liquid(T) - liquid(T_tap)) / np.where(small, 1.0, moved),
     )
     heats = _heats_J(case, poured)
-    rest = (available + sum(losses.values()) - liquid(T_tap)) - sum(heats.values())
+    rest = (available + lost - liquid(T_tap)) - sum(heats.values())
     heats["slags mixed"] = rest
     heats |= {name: -loss for name, loss in losses.items()}
     streams = [*into, *_streams_out(case, poured, T)]

@@ -26,6 +26,8 @@ from converter_calc.tapping.pouring import (
 TAPPED_KG = 1000.0
 #: Cost of an addition without a price that has to stand in [per kg]: chosen last.
 LAST_CHOICE_PER_KG = 1e3
+#: A limit with less room than this counts as reached [kg/t].
+EDGE_KG = 1e-7
 
 
 class Want(NamedTuple):
@@ -239,19 +241,40 @@ def _try(
     """Solve the heats `left` with these additions, the deoxidant binding oxygen or not."""
     best = np.full(left.size, np.inf)
     x = np.zeros((left.size, len(names)))
+    looked = np.arange(left.size)
     for binds in (True, False) if demand.case.killer != "none" else (True,):
         matrix, limits = demand.rows(names, wants, binds=binds)
-        answer = solve_all(cost, matrix, limits[left])
+        answer = solve_all(cost, matrix, limits[left[looked]])
         found.programmes += answer.solved
         total = np.where(answer.feasible, np.nan_to_num(answer.x) @ cost, np.inf)
-        better = total < best
-        x[better], best[better] = answer.x[better], total[better]
+        better = total < best[looked]
+        x[looked[better]], best[looked[better]] = answer.x[better], total[better]
+        slack = limits[left[looked]] - np.nan_to_num(answer.x) @ matrix.T
+        looked = looked[~(answer.feasible & _inside(demand, wants, slack))]
+        if not looked.size:
+            break
     good = np.isfinite(best)
     rows = left[good]
     for place, name in enumerate(names):
         found.kg_per_t[name][rows] = x[good, place]
     found.feasible[rows] = True
     found.preferred[rows] = preferred
+
+
+def _inside(demand: Demand, wants: Sequence[Want], slack: Array) -> Array:
+    """Where the deoxidant binds oxygen and its upper limit leaves room, (n,) bool.
+
+    Such an optimum is that of the whole: the deoxidant burnt is the larger of zero and what
+    the oxygen asks for, which is convex, and nothing is gained by burning more of it.
+    """
+    edges = [
+        place
+        for place, want in enumerate(wants)
+        if want.element == demand.case.killer and want.side == "high"
+    ]
+    if slack.shape[1] > len(wants):
+        edges.append(len(wants))
+    return np.asarray((slack[:, edges] > EDGE_KG).all(axis=1))
 
 
 def _tell(demand: Demand, names: list[str], hard: Sequence[Want], row: int, found: Choice) -> None:

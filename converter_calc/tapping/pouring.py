@@ -16,7 +16,7 @@ import numpy as np
 from converter_calc.balance.problem import SHARED
 from converter_calc.basis.dual import Array
 from converter_calc.basis.elements import mass_fractions
-from converter_calc.laws import deoxidation
+from converter_calc.laws import deoxidation, manganese_silicate
 from converter_calc.tapping.tap_practice import TapPractice
 
 #: Oxide that an element forms when it is lost or binds oxygen; others stay as metal.
@@ -350,8 +350,12 @@ def equilibrium_oxygen_pct(
 ) -> Array:
     """Oxygen in equilibrium with the deoxidant that kills the steel [mass %], (n,)."""
     law = case.practice.aluminium_oxygen if case.killer == "Al" else SILICON_LAW
-    activity = 1.0 if case.killer == "Al" else case.practice.silica_activity
-    found = deoxidation.dissolved_oxygen_pct(
-        law, np.maximum(killer_pct, LEAST_PCT), T_K, others, activity
-    )
+    pct = np.maximum(killer_pct, LEAST_PCT)
+    activity: float | Array = 1.0
+    if case.killer == "Si":
+        activity = case.practice.silica_activity
+        if np.isnan(activity):
+            manganese = np.maximum(others.get("Mn", np.zeros(case.n)), LEAST_PCT)
+            activity = manganese_silicate.silica_activity(pct, manganese, T_K, others)
+    found = deoxidation.dissolved_oxygen_pct(law, pct, T_K, others, activity)
     return np.asarray(found, dtype=float)
