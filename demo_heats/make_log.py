@@ -9,7 +9,7 @@ instruments. Nothing here imports the calculator, and nobody's heats are in it: 
 invented within common practice.
 
 The shop: `shop.toml`, vessel 2, three turns of three to four weeks in 2026 (5 January, 2 March,
-8 June); between them its sister vessel works. About 21 heats a day. The first wait of a turn is
+8 June); between them its sister vessel works. About 20 heats a day. The first wait of a turn is
 blank: the vessel was kept hot by a burner.
 
 The operator has rules of thumb. The scrap box is made up before the hot metal is analysed, from
@@ -25,9 +25,9 @@ ever higher, 1.5 % by the end; hot-metal silicon wanders with the blast furnace.
 
 What steps, with its day:
     2026-01-19 06:00  hot-metal thermometer recalibrated: it read 11 K too hot until then
-    2026-01-24        new lance of the old design; every 260 heats another one
     2026-03-02        relined: age 0, new plugs
     2026-03-14        lance of a new design: more post-combustion, less iron burnt
+    a new lance after every 260 heats: 12 and 25 January, 8 and 26 March, 20 June
     2026-06-17        light scrap from another supplier: yield 6 points worse
 
 One standard deviation of a reading: see `NOISE`. Missing: slag analysis on a third of heats,

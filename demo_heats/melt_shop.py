@@ -30,7 +30,6 @@ TURNS = (
     (10**9, datetime(2026, 6, 8, 6, 55, tzinfo=UTC)),
 )
 RECALIBRATED = datetime(2026, 1, 19, 6, 0, tzinfo=UTC)
-FIRST_NEW_LANCE = datetime(2026, 1, 24, tzinfo=UTC)
 NEW_DESIGN = datetime(2026, 3, 14, tzinfo=UTC)
 NEW_SUPPLIER = datetime(2026, 6, 17, tzinfo=UTC)
 LANCE_LIFE = 260
@@ -372,7 +371,6 @@ def change_lance(shop: Shop) -> None:
     """A new lance on its day, or when the old one is worn."""
     vessel = shop.vessel
     worn = vessel.lance_age >= LANCE_LIFE
-    fresh = shop.when >= FIRST_NEW_LANCE and vessel.lance_age >= shop.heat
     design = int(shop.when >= NEW_DESIGN)
-    if worn or fresh or design != vessel.lance_kind:
+    if worn or design != vessel.lance_kind:
         vessel.lance_age, vessel.lance_kind = 0, design

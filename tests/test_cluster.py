@@ -17,12 +17,15 @@ import pytest
 from converter_calc.basis.errors import InputError
 from converter_calc.heatlog.reading import read_log
 from converter_calc.heatlog.writing import write_log
+from converter_calc.learning import tuning
 from converter_calc.learning.cluster import (
     local_cluster,
     replay_on_cluster,
     spread_frame,
     spread_on_cluster,
+    tune_on_cluster,
 )
+from converter_calc.learning.streamed_tuning import tune_file
 from converter_calc.learning.streaming import Replayed, replay_file
 from tests.conftest import DEMO
 
@@ -133,3 +136,17 @@ def test_number_of_workers_is_checked(workers: int) -> None:
     pytest.importorskip("distributed")
     with pytest.raises(InputError, match="must be 1 to"), local_cluster(workers):
         pass
+
+
+def test_tuning_by_two_processes_is_that_of_one(
+    client: Any, log: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Within a thousandth of the standard error: solves start elsewhere. Twelve passes will do."""
+    monkeypatch.setattr(tuning, "MOST_PASSES", 12)
+    some = tmp_path / "some.parquet"
+    write_log(pd.read_parquet(log).iloc[:60], some)
+    two, _ = tune_on_cluster(client, some, SHOP, only=("P_approach",), rows=30)
+    one, _ = tune_file(some, SHOP, only=("P_approach",), rows=30)
+    a, b = two.parameters[0], one.parameters[0]
+    assert abs(a.value - b.value) <= 1e-3 * b.standard_error
+    assert (two.rows, two.heats) == (one.rows, one.heats)

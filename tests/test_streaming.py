@@ -20,18 +20,17 @@ from converter_calc.basis.errors import InputError
 from converter_calc.cli import main
 from converter_calc.heatlog.reading import read_log
 from converter_calc.heatlog.writing import write_log
-from converter_calc.learning import streaming
+from converter_calc.learning import streamed_tuning
 from converter_calc.learning.log_parts import Refused, cut_log, pieces, read_part
 from converter_calc.learning.parameters import parameter_set
 from converter_calc.learning.replay import read_heats, replay
 from converter_calc.learning.replay_quantities import quantities
+from converter_calc.learning.streamed_tuning import PartSums, tune_file
 from converter_calc.learning.streaming import (
-    PartSums,
     Replayed,
     replay_file,
     replay_frame,
     shop_document,
-    tune_file,
 )
 from converter_calc.learning.tuned import Tuned
 from converter_calc.learning.tuning import summed, tune
@@ -143,7 +142,7 @@ def test_sums_of_parts_are_those_of_the_whole(
     frame: pd.DataFrame, log: Path, tmp_path: Path, held: int, monkeypatch: pytest.MonkeyPatch
 ) -> None:
     """To 1e-8 relative, whether parts are kept or read anew."""
-    monkeypatch.setattr(streaming, "HELD", held)
+    monkeypatch.setattr(streamed_tuning, "HELD", held)
     document = shop_document(SHOP)
     parts, _ = cut_log(log, tmp_path, SHOP, rows=50)
     entries = parameter_set(document, map(str, frame.columns), ("P_approach", "heat_loss_MJ_per_t"))
@@ -177,11 +176,11 @@ def test_a_sample_only_tells_where_to_start(
     log: Path, held: Tuned, monkeypatch: pytest.MonkeyPatch
 ) -> None:
     """Within a fifth of the standard error: the scatter settles a little elsewhere."""
-    monkeypatch.setattr(streaming, "SAMPLE", 25)
+    monkeypatch.setattr(streamed_tuning, "SAMPLE", 25)
     starts: list[Any] = []
-    search = streaming.search
+    search = streamed_tuning.search
     monkeypatch.setattr(
-        streaming, "search", lambda *a, **kw: starts.append(a[2:]) or search(*a, **kw)
+        streamed_tuning, "search", lambda *a, **kw: starts.append(a[2:]) or search(*a, **kw)
     )
     streamed, _ = tune_file(log, SHOP, only=ONLY, rows=60)
     assert [bool(start and start[0]) for start in starts] == [False, True]

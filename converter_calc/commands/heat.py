@@ -103,12 +103,20 @@ def laws() -> None:
 
 @click.command()
 @click.option("--port", type=click.IntRange(1, 65535), default=8501, show_default=True)
+@click.option(
+    "--register",
+    type=click.Path(path_type=Path),
+    envvar="CONVERTER_REGISTER",
+    show_envvar=True,
+    help="File of the register, else converter_register.sqlite here; the page offers the "
+    "registers of its folder.",
+)
 @guarded
-def page(port: int) -> None:
+def page(port: int, register: Path | None) -> None:
     """Open the page in a browser at 127.0.0.1; stop it with Ctrl-C."""
     from converter_calc.page.launch import launch
 
-    launch(port)
+    launch(port, register)
 
 
 COMMANDS = (plan, predict, explain, sensitivity, grades, laws, page)

@@ -21,13 +21,12 @@ from converter_calc.basis.errors import Fault, InputError
 from converter_calc.learning.log_parts import ROWS, Refused, Shop, cut_log, read_part, replaced
 from converter_calc.learning.replay import read_heats
 from converter_calc.learning.spread_table import spread_table
+from converter_calc.learning.streamed_tuning import PartSums, tune_parts
 from converter_calc.learning.streaming import (
-    PartSums,
     Progress,
     Replayed,
     replay_frame,
     shop_document,
-    tune_parts,
     write_tables,
 )
 from converter_calc.learning.tuned import Tuned

@@ -6,7 +6,7 @@ errors. Each draw of these is a heat of its own, predicted by the same balance a
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass, field
 from typing import Any
 
@@ -310,9 +310,3 @@ def _chance_document(c: Chance) -> dict[str, Any]:
             "high": w.high if np.isfinite(w.high) else None,
         }
     return found
-
-
-def covariance_of(mapping: Mapping[str, float]) -> Extra:
-    """Extra uncertainty of inputs that are independent: one standard deviation by flat name."""
-    names = list(mapping)
-    return names, np.diag([mapping[name] ** 2 for name in names])

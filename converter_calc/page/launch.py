@@ -32,11 +32,13 @@ def arguments(port: int) -> list[str]:
     return ["streamlit", "run", str(script), f"--server.port={port}", *flags]
 
 
-def launch(port: int = 8501) -> None:
+def launch(port: int = 8501, register: Path | None = None) -> None:
     """Run the server until it is stopped.
 
+    register : file of the register; others in its folder can be chosen on the page.
     Raises InputError where streamlit is not installed or the port is taken.
     """
+    import os
     import socket
 
     from converter_calc.basis.errors import Fault, InputError
@@ -52,6 +54,8 @@ def launch(port: int = 8501) -> None:
         from streamlit.web import cli
     except ImportError as error:
         raise InputError([Fault("page", "streamlit is not installed")]) from error
+    if register is not None:
+        os.environ["CONVERTER_REGISTER"] = str(register.absolute())
     _warm_up()
     sys.argv = arguments(port)
     sys.exit(cli.main())

@@ -10,6 +10,7 @@ from converter_calc.page.markup import heading, put, rows_of, table_html
 from converter_calc.page.reasons import figures, reason_for
 from converter_calc.page.results import amount, shown_answer, term_rows
 from converter_calc.page.session import Answer, answer, form, guarded, write_address
+from converter_calc.page.sureness import sureness
 from converter_calc.planning.outcome import Outcome
 from converter_calc.reporting import tables
 from converter_calc.reporting.html_sheet import element
@@ -40,10 +41,13 @@ def _plan() -> None:
         put(shown_answer(found))
         if found.outcome is not None:
             _reasons(found.outcome)
+        unsure = st.container()
         _inputs_used(found)
     write_address()
     if st.session_state.get("cc_address_too_long"):
         put("This heat is too long for an address; save it under Files to keep or share it.")
+    with unsure:  # last, so that the recipe does not wait for it
+        sureness()
 
 
 def _reasons(outcome: Outcome) -> None:

@@ -126,10 +126,17 @@ def view_field(view: str, name: str, label: str, **options: Any) -> str:
     return text
 
 
-def view_choice(view: str, name: str, label: str, options: Sequence[str], **more: Any) -> str:
+def view_choice(
+    view: str,
+    name: str,
+    label: str,
+    options: Sequence[str],
+    draw: Callable[..., Any] | None = None,
+    **more: Any,
+) -> str:
     """A choice of a view by name, kept like `view_field`; the first where none was made.
 
-    A text of the address that is not among the options is told.
+    A text of the address that is not among the options is told. draw : the widget; None: a box.
     """
     key = f"{view}.{name}"
     kept = st.session_state["cc_views"].get(key, "")
@@ -137,7 +144,7 @@ def view_choice(view: str, name: str, label: str, options: Sequence[str], **more
         put(note("fault", f"{label}: {kept[:40]!r} of before is not there; {options[0]} is shown."))
     if st.session_state.get(key) not in options:
         st.session_state[key] = kept if kept in options else options[0]
-    found: str = st.selectbox(label, options, key=key, **more)
+    found: str = (draw or st.selectbox)(label, options, key=key, **more)
     _keep(key, "" if found == options[0] else found)
     return found
 

@@ -16,7 +16,10 @@ from converter_calc.page.files_view import files_view
 from converter_calc.page.lime_view import lime_view
 from converter_calc.page.markup import fault_texts, note, put, put_style
 from converter_calc.page.plan_view import plan_view
+from converter_calc.page.practice_view import practice_view
+from converter_calc.page.register_view import register_view
 from converter_calc.page.scrap_view import scrap_view
+from converter_calc.page.tap_view import tap_view
 from converter_calc.reporting.html_sheet import element
 
 #: Name in the address -> name on the tab, and what draws it.
@@ -25,6 +28,9 @@ VIEWS = {
     "balance": ("Heat balance", balance_view),
     "scrap": ("Scrap ratio", scrap_view),
     "lime": ("Lime and phosphorus", lime_view),
+    "practice": ("Slag practice", practice_view),
+    "tap": ("Tap and ladle", tap_view),
+    "register": ("Register", register_view),
     "files": ("Files", files_view),
 }
 

@@ -1,7 +1,7 @@
 """A log of a million heats: replayed and tuned in bounded memory, and by two processes.
 
 The heats are those of the demo log over and over, each a little moved (invented). Run with
-`pytest tests/bench/bench_scale.py -s -n 0`; it takes about half an hour, and less with
+`pytest tests/bench/bench_scale.py -s -n 0`; it takes about an hour, and less with
 CONVERTER_BENCH_HEATS set to a smaller number.
 """
 
@@ -34,7 +34,8 @@ MOVED = {"hot_metal_temp_C": 4.0, "hm_Si_pct": 0.01, "oxygen_Nm3": 20.0, "end_te
 #: Runs in a process of its own and tells its time and the most memory it ever took.
 WORKER = """
 import json, resource, sys, time
-from converter_calc.learning.streaming import replay_file, tune_file
+from converter_calc.learning.streaming import replay_file
+from converter_calc.learning.streamed_tuning import tune_file
 what, log, shop, out, most = json.loads(sys.argv[1])
 start = time.perf_counter()
 if what == "replay":

@@ -1,0 +1,205 @@
+"""The metallurgist's places on the page: wiring and numbers of each view, without a browser.
+
+Kinds of check: contract (what the page shows against the same question asked in Python) and
+property (what is typed reaches the heat file and the address and nothing else changes).
+"""
+
+from __future__ import annotations
+
+import json
+from typing import Any
+
+import pytest
+
+import converter_calc
+from converter_calc.metallurgy.element_shares import element_shares
+from converter_calc.metallurgy.practices import compare_practices
+from converter_calc.metallurgy.slag_product import slag_product
+from converter_calc.planning.outcome import at
+from converter_calc.planning.tap import tap
+from tests.demo import whole
+
+testing = pytest.importorskip("streamlit.testing.v1", reason="the page needs streamlit")
+
+from converter_calc.page.form import document_of, form_of  # noqa: E402
+from converter_calc.page.session import start_form  # noqa: E402
+from tests.test_page_app import field, opened, param, texts  # noqa: E402
+
+
+def heat(app: Any) -> dict[str, Any]:
+    """The heat document as the fields of the page make it."""
+    return document_of(app.session_state["cc_form"])
+
+
+def choose(app: Any, key: str, value: str) -> Any:
+    """Set the box or radio of a key."""
+    (found,) = [x for x in [*app.selectbox, *app.radio] if x.key == key]
+    return found.set_value(value).run()
+
+
+def shown(app: Any, label: str) -> Any:
+    (found,) = [x for x in app.selectbox if x.label == label]
+    return found
+
+
+def pictures(app: Any) -> list[Any]:
+    found = app.get("plotly_chart")
+    assert all(chart.proto.alt for chart in found)
+    return list(found)
+
+
+# --- slag practice ---------------------------------------------------------------------------
+
+
+def test_practices_show_what_python_says_for_typed_inputs() -> None:
+    app = opened(view="practice")
+    field(app, "First slag poured off, %").set_value("70").run()
+    field(app, "Carbon at slag-off, %").set_value("2,8").run()
+    document = heat(app)
+    assert document["slag_off"] == {"share_pct": 70.0, "C_pct": 2.8}
+    assert param(app, "slag_off_share_pct") == "70"
+    table = compare_practices(document).table().set_index("practice")
+    page = texts(app)
+    for name in table.index:
+        assert f"{table.loc[name, 'lime_kg']:,.0f}" in page
+        assert f"{table.loc[name, 'end_P_pct']:.4f}" in page
+    (chart,) = pictures(app)
+    bars = json.loads(chart.proto.spec)["data"]
+    assert len(bars) == 6
+    assert "two slags" in chart.proto.alt
+    assert not app.exception
+
+
+def test_a_practice_opens_its_stages_and_its_explanation() -> None:
+    app = opened(view="practice")
+    app.session_state["practice_two_slags"] = True
+    app.run()
+    page = texts(app)
+    assert "to slag-off" in page
+    assert "ogawa_2001" in page
+    assert "Closure over all stages" in page
+    choose(app, "why_practices", "two slags, after slag-off: phosphorus")
+    assert "L_P" in texts(app)
+    choose(app, "why_practices", "kept slag: every number and what it counts")
+    assert "liquid slag poured off and at the end, less what came back" in texts(app)
+
+
+def test_wrong_input_of_a_practice_is_named_and_nothing_is_shown_for_it() -> None:
+    app = opened(view="practice")
+    field(app, "Carbon at slag-off, %").set_value("4.5").run()
+    assert "No plan" not in texts(app)
+    field(app, "Carbon at slag-off, %").set_value("0,03").run()
+    assert "0.03 is outside 0.1 to 4.5 %" in texts(app)
+    assert not app.get("plotly_chart")
+    field(app, "Carbon at slag-off, %").set_value("").run()
+    assert pictures(app)
+
+
+def test_practices_belong_to_planning() -> None:
+    app = opened(view="practice", question="predict")
+    assert not app.get("plotly_chart")
+    assert not app.exception
+
+
+def test_slag_is_shown_with_definitions() -> None:
+    app = opened(view="practice", **{"practice.part": "slag"})
+    product = slag_product(converter_calc.plan(document_of(start_form())))
+    page = texts(app)
+    for name in ("basicity_MgO", "optical_basicity"):
+        quantity = product.quantities[name]
+        assert f"{float(at(quantity.values, 0)):.3f}" in page
+    assert "swell when it takes up water" in page
+
+
+def test_elements_show_shares_law_and_sources() -> None:
+    app = opened(view="practice", **{"practice.part": "elements"})
+    shares = element_shares(converter_calc.plan(document_of(start_form())))
+    page = texts(app)
+    for el in ("Mn", "P", "V", "Ti"):
+        for place in ("steel", "slag"):
+            assert f"{shares.elements[el].pct()[place][0]:.2f}" in page
+    assert "park_dzo" in page
+    (chart,) = pictures(app)
+    spec = json.loads(chart.proto.spec)
+    assert {bar["name"] for bar in spec["data"]} >= {"steel", "slag", "gas", "dust"}
+    choose(app, "why_elements", "P: charged and leaving")
+    assert "brought by hot metal" in texts(app)
+    assert "Assis" in texts(app)
+
+
+# --- tap and ladle ---------------------------------------------------------------------------
+
+
+def demo_tap(app: Any) -> Any:
+    """The demo heat with a grade, in the fields of the page."""
+    app.session_state["cc_form"] = form_of(whole("structural_grade_to_ladle"))
+    app.session_state["cc_generation"] += 1
+    return app.run()
+
+
+def test_tap_shows_what_python_says() -> None:
+    app = demo_tap(opened(view="tap"))
+    told = tap(whole("structural_grade_to_ladle")).document()["tap"]
+    page = texts(app)
+    assert f"{told['temperature_C']:,.1f} °C" in page
+    for row in told["additions"]:
+        assert f"{row['mass_kg']:,.1f}" in page
+    for row in told["limits"]:
+        assert f"{row['pct']:.4f}" in page
+    assert "✓ inside" in page
+    assert "boils and may throw" in page
+    assert len(pictures(app)) == 2
+    choose(app, "why_tap", "phosphorus in the ladle")
+    assert "given back by the carried-over slag" in texts(app)
+    assert not app.exception
+
+
+def test_choices_of_the_tap_reach_the_heat_file_and_the_answer() -> None:
+    app = demo_tap(opened(view="tap"))
+    field(app, "From tap to ladle station, min").set_value("20").run()
+    shown(app, "Additions aim at").set_value("minimum").run()
+    document = heat(app)
+    assert document["tap"]["standing_min"] == 20.0
+    assert document["tap"]["aim_at"] == "minimum"
+    expected = whole("structural_grade_to_ladle")
+    expected["tap"] |= {"standing_min": 20, "aim_at": "minimum"}
+    told = tap(expected).document()["tap"]
+    assert f"{told['temperature_C']:,.1f} °C" in texts(app)
+    field(app, "From tap to ladle station, min").set_value("").run()
+    shown(app, "Additions aim at").set_value("middle").run()
+    assert "aim_at" not in heat(app)["tap"]
+    assert "standing_min" not in heat(app)["tap"]
+
+
+def test_wrong_tap_input_is_kept_and_named() -> None:
+    app = opened(view="tap")
+    field(app, "Slag carried over, kg/t").set_value("99").run()
+    assert "99 is outside 0 to 30 kg/t" in texts(app)
+    assert not app.get("plotly_chart")
+    assert field(app, "Slag carried over, kg/t").value == "99"
+    field(app, "Slag carried over, kg/t").set_value("7,5").run()
+    assert heat(app)["tap"] == {"carried_slag_kg_per_t": 7.5}
+    assert pictures(app)
+
+
+def test_tap_temperature_follows_from_the_ladle() -> None:
+    app = demo_tap(opened(view="tap"))
+    field(app, "Wanted in the ladle, °C").set_value("1585").run()
+    (button,) = [x for x in app.button if x.key == "free_tap_temp"]
+    button.click().run()
+    assert "temp_C" not in heat(app)["aim"]
+    assert "1,585.0 °C" in texts(app)
+
+
+def test_price_of_an_addition_decides() -> None:
+    app = demo_tap(opened(view="tap"))
+    app.session_state["tap_prices"] = True
+    app.run()
+    field(app, "FeMn HC, currency/t").set_value("90000").run()
+    expected = whole("structural_grade_to_ladle")
+    expected["tap"]["price_per_t"]["FeMn HC"] = 90000
+    told = tap(expected).document()["tap"]
+    assert "FeMn HC" not in [row["name"] for row in told["additions"]]
+    page = texts(app)
+    for row in told["additions"]:
+        assert f"{row['mass_kg']:,.1f}" in page
