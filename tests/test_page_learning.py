@@ -7,18 +7,31 @@ jobs of one session only, nothing left behind).
 
 from __future__ import annotations
 
+import time
 from pathlib import Path
 from typing import Any
 
+import numpy as np
 import pytest
+
+from tests.conftest import DEMO
+from tests.demo import whole
 
 testing = pytest.importorskip("streamlit.testing.v1", reason="the page needs streamlit")
 
+from converter_calc.balance.documents import read_shop  # noqa: E402
+from converter_calc.basis.errors import InputError  # noqa: E402
 from converter_calc.learning.spread import spread  # noqa: E402
 from converter_calc.learning.spread_margin import margin  # noqa: E402
-from converter_calc.page import sureness  # noqa: E402
+from converter_calc.learning.tuned import load_tuned  # noqa: E402
+from converter_calc.learning.tuning import tune  # noqa: E402
+from converter_calc.page import jobs, learning_view, registers, sureness  # noqa: E402
 from converter_calc.page.form import document_of, form_of  # noqa: E402
+from converter_calc.page.jobs import Job  # noqa: E402
+from converter_calc.page.learning_results import json_of  # noqa: E402
+from converter_calc.page.learnt import restored, taken  # noqa: E402
 from converter_calc.page.session import solve, start_form  # noqa: E402
+from converter_calc.register.register import Register  # noqa: E402
 from converter_calc.reporting import spread_bands  # noqa: E402
 
 ROOT = Path(__file__).resolve().parents[1]
@@ -107,3 +120,271 @@ def test_size_of_an_error_goes_into_the_heat() -> None:
     form = app.session_state["cc_form"]
     assert form.rest["errors"] == {"oxygen_meter_pct": 0.5}
     assert form_of(document_of(form)).rest["errors"] == {"oxygen_meter_pct": 0.5}
+
+
+# --- register -------------------------------------------------------------------------------
+
+
+@pytest.fixture
+def folder(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
+    """A folder for registers; the page is started with one that is not there yet."""
+    monkeypatch.setenv("CONVERTER_REGISTER", str(tmp_path / "shop.sqlite"))
+    return tmp_path
+
+
+def show(app: Any, view: str, **state: Any) -> Any:
+    app.session_state["cc_view"] = view
+    for name, value in state.items():
+        app.session_state[name] = value
+    return app.run()
+
+
+def book(folder: Path) -> Register:
+    return Register.open(folder / "shop.sqlite", create=False)
+
+
+def test_plan_recorded_actual_recorded_and_compared(folder: Path) -> None:
+    app = press(show(opened(), "Register"), "record_plan")
+    assert "Kept as plan 1 of heat new heat." in texts(app)
+    app = show(app, "Register", actual_open=True)
+    for label, text in (("End temperature, °C", "1651,5"), ("C, %", "0.037")):
+        (field,) = [x for x in app.text_input if x.label == label and "actual_" in x.key]
+        field.set_value(text)
+    app = press(app, "record_actual_new heat")
+    assert not app.exception
+    assert "Kept as record 1 of heat new heat." in texts(app)
+    with book(folder) as register:
+        assert register.current_actual("new heat") == {"end_temp_C": 1651.5, "end_C_pct": 0.037}
+        rows = register.compare("new heat").rows.set_index("quantity")
+    assert f"−{abs(rows.loc['end_temp_C', 'difference']):.1f}" in texts(app)
+    assert "hot_metal_kg and oxygen_Nm3 not logged" in texts(app)
+
+
+def test_recorded_plan_opens_again_as_it_was(folder: Path) -> None:
+    app = opened()
+    app.session_state["cc_form"].fields["hm_Si_pct"] = "0.61"
+    app = press(show(app, "Register"), "record_plan")
+    first = document_of(app.session_state["cc_form"])
+    app.session_state["cc_form"].fields["hm_Si_pct"] = "0.30"
+    app = press(show(app, "Register"), "open_plan")
+    assert not app.exception
+    assert document_of(app.session_state["cc_form"]) == first
+    assert app.session_state["cc_view"] == "Plan a heat"
+    with book(folder) as register:
+        assert register.plan(1).inputs == first
+
+
+def test_wrong_actual_is_told_and_nothing_recorded(folder: Path) -> None:
+    app = press(show(opened(), "Register", actual_open=True), "record_plan")
+    (field,) = [x for x in app.text_input if x.key == "actual_new heat_end_temp_C"]
+    field.set_value("16510")
+    app = press(app, "record_actual_new heat")
+    assert "Nothing was recorded of heat new heat" in texts(app)
+    assert "end_temp_C" in texts(app)
+    with book(folder) as register:
+        assert register.current_actual("new heat") is None
+
+
+def test_only_registers_of_the_folder_by_name(folder: Path, tmp_path_factory: Any) -> None:
+    outside = tmp_path_factory.mktemp("outside") / "other.sqlite"
+    for path in (outside, folder / "second.sqlite"):
+        Register.open(path).close()
+    (folder / "notes.sqlite").write_text("no register")
+    (folder / "link.sqlite").symlink_to(outside)
+    assert registers.register_names() == ["shop.sqlite", "second.sqlite"]
+    for name in ("../other.sqlite", str(outside), "link.sqlite", "notes.sqlite", "", "\x00"):
+        with pytest.raises(InputError, match="is not at hand"), registers.opened(name):
+            pass
+    app = opened()
+    app.query_params["register.file"] = str(outside)
+    app = show(app, "Register")
+    assert app.session_state["register.file"] == "shop.sqlite"
+
+
+def test_damaged_register_is_one_sentence_without_a_path(folder: Path) -> None:
+    (folder / "shop.sqlite").write_bytes(b"not a database at all" * 40)
+    app = show(opened(), "Register")
+    assert not app.exception
+    assert "is not a register: not a database of SQLite" in texts(app)
+    assert str(folder) not in texts(app)
+
+
+LOG = b"heat_id,end_temp_C,end_C_pct\na1,1650,0.04\na2,9999,0.05\na3,1660,0.06\n"
+
+
+def test_log_taken_in_refused_rows_listed_and_saved_again(folder: Path) -> None:
+    report = registers.import_upload("shop.sqlite", LOG, "../../evil/log.csv", {})
+    assert (report.new, report.rows_refused) == (2, 1)
+    assert report.refused["heat_id"].tolist() == ["a2"]
+    again = registers.exported("shop.sqlite", ".csv").decode()
+    assert [line.split(",")[0] for line in again.splitlines()[1:]] == ['"a1"', '"a3"']
+    copy = folder / "copy.sqlite"
+    copy.write_bytes(registers.backed_up("shop.sqlite"))
+    with Register.open(copy, create=False) as register:
+        assert len(register.actuals()) == 2
+    strict = registers.import_upload("shop.sqlite", LOG.replace(b"a3", b"a4"), "log.csv", {},
+                                     strict=True)  # fmt: skip
+    assert not strict.taken
+    assert sorted(path.name for path in folder.glob("*.sqlite")) == ["copy.sqlite", "shop.sqlite"]
+
+
+def test_log_import_on_the_page(folder: Path) -> None:
+    app = show(opened(), "Register", **{"register.part": "files"})
+    app.get("file_uploader")[0].set_value(("log.csv", LOG, "text/csv"))
+    app = press(app.run(), "register_import")
+    assert not app.exception
+    assert "2 heats new, 0 updated, 0 said nothing new; 1 rows refused" in texts(app)
+    assert "a2" in texts(app)
+
+
+# --- learning -------------------------------------------------------------------------------
+
+
+@pytest.fixture(scope="module")
+def shop() -> dict[str, Any]:
+    return dict(read_shop(DEMO / "shop.toml"))
+
+
+@pytest.fixture(scope="module")
+def log() -> bytes:
+    """The first 150 heats of the demo log."""
+    lines = (DEMO / "heat_log.csv").read_bytes().splitlines(keepends=True)
+    return b"".join(lines[:151])
+
+
+def finished(job: Job) -> dict[str, Any]:
+    job.process.wait(120)
+    return job.result()
+
+
+@pytest.fixture(scope="module")
+def learnt(log: bytes, shop: dict[str, Any]) -> dict[str, Any]:
+    return finished(Job("tune", registers.read_upload(log, "log.csv", shop).frame, shop))
+
+
+def test_job_finds_what_the_function_finds(
+    learnt: dict[str, Any], log: bytes, shop: dict[str, Any]
+) -> None:
+    frame = registers.read_upload(log, "log.csv", shop).frame
+    direct = tune(frame, shop).practice_values()
+    assert learnt["tuned"].practice_values() == pytest.approx(direct, rel=1e-9)
+
+
+def test_cancelled_job_is_dead_and_leaves_nothing(log: bytes, shop: dict[str, Any]) -> None:
+    frame = registers.read_upload(log, "log.csv", shop).frame
+    job = Job("prove", frame, shop)
+    assert job.running
+    folder, process = job.folder, job.process
+    job.cancel()
+    assert process.poll() is not None
+    assert not folder.exists()
+    with pytest.raises(InputError, match="without a result"):
+        job.result()
+
+
+def test_job_ends_with_its_session(log: bytes, shop: dict[str, Any]) -> None:
+    """A session that is dropped, and one that is there but has gone for longer than a break."""
+    frame = registers.read_upload(log, "log.csv", shop).frame
+    job = Job("prove", frame, shop)
+    folder, process = job.folder, job.process
+    del job
+    assert process.wait(10) is not None
+    assert not folder.exists()
+
+
+def test_job_of_a_session_that_went_away_is_ended(
+    log: bytes, shop: dict[str, Any], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setattr(jobs, "LOOK_EVERY_S", 0.05)
+    monkeypatch.setattr(jobs, "AWAY_S", 0.1)
+    frame = registers.read_upload(log, "log.csv", shop).frame
+    job = Job("prove", frame, shop, alive=lambda: False)
+    assert job.process.wait(10) != 0
+    for _ in range(100):
+        if not job.folder.exists():
+            break
+        time.sleep(0.05)
+    assert not job.folder.exists()
+
+
+def test_no_more_jobs_at_once_than_the_machine_bears(
+    log: bytes, shop: dict[str, Any], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setattr(jobs, "MOST_JOBS", 1)
+    frame = registers.read_upload(log, "log.csv", shop).frame
+    job = Job("prove", frame, shop)
+    with pytest.raises(InputError, match="run on this machine already"):
+        Job("tune", frame, shop)
+    job.cancel()
+
+
+def test_job_without_answer_says_why(shop: dict[str, Any]) -> None:
+    frame = registers.read_upload(LOG, "log.csv", shop).frame
+    with pytest.raises(InputError, match="tapped_at: not given"):
+        finished(Job("tune", frame, shop))
+
+
+def test_learnt_values_go_into_the_fields_and_back(learnt: dict[str, Any]) -> None:
+    form = form_of(whole("ordinary_low_carbon"))
+    today = learnt["followed"].today()
+    new, known, before = taken(form, today, "the log")
+    heats = solve(document_of(new), predict=False).heats
+    for name, x in known.values.items():
+        assert x == pytest.approx(today.practice_values()[name], rel=1e-5)
+        if name in heats.values:
+            assert float(heats.values[name][0]) == x
+    names, covariance = known.unsure(new)
+    assert names == tuple(known.values)
+    assert np.sqrt(np.diag(covariance)).tolist() == pytest.approx(
+        [today.standard_errors()[name] for name in names]
+    )
+    new.fields["P_approach"] = "0.9"  # changed by hand: no longer the learnt value
+    assert "P_approach" not in known.unsure(new)[0]
+    assert document_of(restored(new, before)) == document_of(form)
+
+
+def test_learning_on_the_page(learnt: dict[str, Any], log: bytes, shop: dict[str, Any]) -> None:
+    read = registers.read_upload(log, "log.csv", shop)
+    state = {
+        "cc_log": learning_view.Log("log.csv", read), "cc_tune": learnt,
+        "cc_form": form_of(whole("ordinary_low_carbon")), "cc_start": start_form(),
+        "cc_link_faults": [], "cc_views": {}, "cc_generation": 0, "cc_view": "Learning",
+    }  # fmt: skip
+    app = opened(**state, **{"learning.part": "tuning"})
+    assert not app.exception
+    assert f"{learnt['tuned'].heats:,} of 150 heats used" in texts(app)
+    (part,) = [x for x in app.radio if x.key == "learning.part"]
+    app = part.set_value("drift").run()
+    assert not app.exception
+    app = press(app, "take_today")
+    assert "are in the fields of Plan a heat" in texts(app)
+    value = learnt["followed"].today().practice_values()["P_approach"]
+    form = app.session_state["cc_form"]
+    assert float(form.fields["P_approach"]) == pytest.approx(value, rel=1e-5)
+    app = show(app, "Plan a heat", sureness=True)
+    assert "uncertainty of the parameters from the end of log.csv" in texts(app)
+    app = show(app, "Learning")
+    app = press(app, "undo_take_today")
+    assert document_of(app.session_state["cc_form"]) == document_of(
+        form_of(whole("ordinary_low_carbon"))
+    )
+
+
+def test_tuned_file_of_the_page_serves_the_command_line(
+    learnt: dict[str, Any], tmp_path: Path
+) -> None:
+    path = tmp_path / "tuned.json"
+    path.write_text(json_of(learnt["tuned"]), encoding="utf-8")
+    assert load_tuned(path).practice_values() == learnt["tuned"].practice_values()
+
+
+def test_log_with_refused_rows_on_the_page() -> None:
+    app = show(opened(), "Learning")
+    app.get("file_uploader")[0].set_value(("log.csv", LOG, "text/csv"))
+    app = app.run()
+    assert not app.exception
+    assert "rows refused" in texts(app)
+    assert "a2" in texts(app)
+    app = app.get("file_uploader")[0].set_value(("log.csv", b"nonsense,x\n1,2\n", "text/csv")).run()
+    assert not app.exception
+    assert "converter_calc_" not in texts(app)  # no folder of the server in a message

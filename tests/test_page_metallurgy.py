@@ -7,16 +7,28 @@ property (what is typed reaches the heat file and the address and nothing else c
 from __future__ import annotations
 
 import json
+import math
 from typing import Any
 
 import pytest
 
 import converter_calc
+from converter_calc.balance.heats import heats_from_dict
+from converter_calc.heatlog.reading import read_log
 from converter_calc.metallurgy.element_shares import element_shares
+from converter_calc.metallurgy.flux_choice import choose_fluxes
+from converter_calc.metallurgy.flux_mixes import flux_mixes
+from converter_calc.metallurgy.flux_search import FluxLimits
+from converter_calc.metallurgy.law_ranking import rank_laws
+from converter_calc.metallurgy.laws_compared import compare_laws
+from converter_calc.metallurgy.lime_limits import lime_limits
+from converter_calc.metallurgy.marginal_cost import marginal_cost
 from converter_calc.metallurgy.practices import compare_practices
 from converter_calc.metallurgy.slag_product import slag_product
 from converter_calc.planning.outcome import at
 from converter_calc.planning.tap import tap
+from converter_calc.reporting.uploads import parse_table
+from tests.conftest import DEMO
 from tests.demo import whole
 
 testing = pytest.importorskip("streamlit.testing.v1", reason="the page needs streamlit")
@@ -203,3 +215,117 @@ def test_price_of_an_addition_decides() -> None:
     page = texts(app)
     for row in told["additions"]:
         assert f"{row['mass_kg']:,.1f}" in page
+
+
+# --- lime and phosphorus ---------------------------------------------------------------------
+
+
+def press(app: Any, key: str) -> Any:
+    (button,) = [x for x in app.button if x.key == key]
+    return button.click().run()
+
+
+def test_limits_stand_on_the_curve_and_in_the_table() -> None:
+    app = opened(view="lime")
+    limits = lime_limits(heats_from_dict(document_of(start_form())))
+    page = texts(app)
+    for mark in limits.marks:
+        assert mark.label in page
+        if math.isfinite(mark.lime_kg):
+            assert f"{mark.lime_kg:,.0f}" in page
+    lime = pictures(app)[0]
+    notes = [note["text"] for note in json.loads(lime.proto.spec)["layout"]["annotations"]]
+    assert "<b>1</b>" in notes
+    assert "lime stops dissolving" in lime.proto.alt
+    choose(app, "why_limits", "lime stops dissolving")
+    assert "(CaO) at which dissolution stops" in texts(app)
+
+
+def test_every_law_is_planned_once_asked() -> None:
+    app = opened(view="lime")
+    assert "balajiva_vajragupta_1946" not in texts(app)
+    press(app, "compare_laws")
+    page = texts(app)
+    table = compare_laws(heats_from_dict(document_of(start_form())), ["ogawa_2001"]).table
+    assert "balajiva_vajragupta_1946" in page
+    assert f"{table['lime_kg'][0]:,.0f}" in page
+    assert f"{table['iron_to_slag_kg'][0]:,.0f}" in page
+    choose(app, "why_laws", "ogawa_2001: lime")
+    assert "approach times the law" in texts(app)
+    field(app, "Lime from, kg").set_value("4000").run()
+    assert "balajiva_vajragupta_1946" in texts(app)  # still the same heat
+
+
+def test_cost_of_low_phosphorus_is_that_of_python() -> None:
+    app = opened(view="lime", aim_P_pct="0.008", **{"lime.part": "margin"})
+    form = start_form()
+    form.fields["aim_P_pct"] = "0.008"
+    cost = marginal_cost(heats_from_dict(document_of(form)))
+    assert cost.binding
+    page = texts(app)
+    assert f"{cost.change['lime_kg']:+,.1f}" in page
+    assert f"{cost.cost:+,.2f}" in page
+    assert len(pictures(app)) == 1
+    easy = opened(view="lime", **{"lime.part": "margin"})
+    assert "nothing: the least basicity sets the lime" in texts(easy)
+
+
+def test_fluxes_by_least_cost_and_taken_into_the_plan() -> None:
+    app = opened(view="lime", **{"lime.part": "fluxes"})
+    app.session_state["cc_form"] = form_of(whole("ordinary_low_carbon"))
+    app.session_state["cc_generation"] += 1
+    app.run()
+    field(app, "Value of a tonne of steel, currency").set_value("420").run()
+    press(app, "compare_fluxes")
+    heats = heats_from_dict(heat(app))
+    choice = choose_fluxes(heats, None, FluxLimits(), 420.0)
+    page = texts(app)
+    assert f"{choice.cost_per_t:.2f} a tonne of steel" in page
+    mixes = flux_mixes(heats).table
+    stone = mixes[(mixes["lime"] == "limestone") & (mixes["magnesia"] == "dolomitic_lime")]
+    assert f"{stone['heat_MJ'].iloc[0]:+,.0f}" in page
+    assert f"{stone['d_CO2_kg_per_t'].iloc[0]:+,.1f}" in page
+    press(app, "take_fluxes")
+    kg = {use.material: use.kg for use in choice.uses if use.kg > 0.0}
+    assert kg
+    for name, mass in kg.items():
+        assert heat(app)["charge"][f"{name}_kg"] == round(mass)
+    press(app, "free_fluxes")
+    assert "charge" not in heat(app) or "burnt_lime_kg" not in heat(app)["charge"]
+
+
+def test_flux_number_out_of_range_is_named() -> None:
+    app = opened(view="lime", **{"lime.part": "fluxes", "lime.fluorspar": "-1"})
+    assert "-1 is outside 0 to 100" in texts(app)
+    assert not app.exception
+
+
+def test_log_ranks_the_laws_and_one_click_takes_one_over() -> None:
+    app = opened(view="lime", **{"lime.part": "measured"})
+    press(app, "rank_laws")
+    assert "choose a file first" in texts(app)
+    rows = (DEMO / "heat_log.csv").read_bytes().splitlines(keepends=True)[:301]
+    app.get("file_uploader")[0].set_value(("log.csv", b"".join(rows), "text/csv")).run()
+    press(app, "rank_laws")
+    log = read_log(parse_table(b"".join(rows), "log.csv"), materials=["ladle_skulls"]).frame
+    ranking = rank_laws(log)
+    page = texts(app)
+    for row in ranking.table.to_dict("records"):
+        assert f"{row['approach']:,.3f}" in page
+    assert len(pictures(app)) == 1
+    fit = ranking.fits[str(ranking.offered)]
+    press(app, "take_law")
+    document = heat(app)
+    assert document["law"]["phosphorus"] == fit.law
+    assert document["practice"]["P_approach"] == pytest.approx(fit.approach, rel=5e-4)
+    assert "The plan now uses" in texts(app)
+    assert converter_calc.plan(document).status[0] == "solved"
+
+
+def test_foreign_log_is_told_in_sentences() -> None:
+    app = opened(view="lime", **{"lime.part": "measured"})
+    content = b"heat_id,end_P_pct\n=1+1,![x](http://evil.invalid/p.png)\n"
+    app.get("file_uploader")[0].set_value(("log.csv", content, "text/csv")).run()
+    press(app, "rank_laws")
+    assert "The log was not taken" in texts(app)
+    assert not app.exception

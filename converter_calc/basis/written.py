@@ -25,7 +25,7 @@ _TEXTS: dict[Any, str] = {
     np.divide: "{} / {}",
     np.less: "{} < {}",
     np.greater: "{} > {}",
-    np.logical_and: "{} & {}",
+    np.logical_and: "both({}, {})",
     np.maximum: "larger({}, {})",
     np.minimum: "smaller({}, {})",
     np.where: "where({}, {}, {})",
@@ -42,6 +42,7 @@ _OVER_FLOATS: dict[str, Any] = {
     "larger": max,
     "smaller": min,
     "where": lambda condition, a, b: a if condition else b,
+    "both": lambda a, b: bool(a) and bool(b),  # a mask that is given is the number 0 or 1
 }
 _OVER_ARRAYS: dict[str, Any] = {
     "sqrt": np.sqrt,
@@ -50,6 +51,7 @@ _OVER_ARRAYS: dict[str, Any] = {
     "larger": np.maximum,
     "smaller": np.minimum,
     "where": np.where,
+    "both": np.logical_and,
 }
 
 

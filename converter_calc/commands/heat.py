@@ -13,6 +13,7 @@ from converter_calc.commands.shared import (
     TUNED,
     UNITS,
     guarded,
+    planned,
     with_tuned,
     write_json,
 )
@@ -33,9 +34,7 @@ def _show(outcome: Any, json_to: str | None, units: str) -> None:
 @guarded
 def plan(heat: Path, json_to: str | None, units: str, tuned: Path | None) -> None:
     """Solve for what is missing from the charge of HEAT and print the charge sheet."""
-    from converter_calc.planning.plan import plan as plan_heat
-
-    _show(plan_heat(with_tuned(heat, tuned)), json_to, units)
+    _show(planned(heat, tuned), json_to, units)
 
 
 @click.command()

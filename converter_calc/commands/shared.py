@@ -29,7 +29,7 @@ UNITS = click.option(
 TUNED = click.option(
     "--tuned",
     type=click.Path(path_type=Path),
-    help="Parameters of the shop from its heat log (tune --out), in place of those of the file.",
+    help="What the heat log says of the shop (tune --out or follow --out), in place of the file.",
 )
 JSON = click.option(
     "--json", "json_to", metavar="FILE|-", help="Write the result as JSON; - is standard output."
@@ -59,10 +59,21 @@ def with_tuned(heat: Path, tuned: Path | None) -> Any:
     """The heat as it stands, or with tuned parameters in place of the shop's."""
     if tuned is None:
         return heat
-    from converter_calc.learning.tuned import load_tuned
+    from converter_calc.learning.today import load_today
     from converter_calc.planning.plan import as_heats
 
-    return load_tuned(tuned).apply(as_heats(heat))
+    return load_today(tuned).tuned.apply(as_heats(heat))
+
+
+def planned(heat: Path, tuned: Path | None) -> Any:
+    """The heat planned; with the offsets of the day where a file of them is given."""
+    from converter_calc.planning.plan import as_heats, plan
+
+    if tuned is None:
+        return plan(heat)
+    from converter_calc.learning.today import load_today, plan_one
+
+    return plan_one(as_heats(heat), load_today(tuned))
 
 
 def _tell_infeasible(error: InfeasibleError) -> None:
@@ -82,10 +93,15 @@ def write_json(document: dict[str, Any], json_to: str | None) -> bool:
     if json_to == "-":
         click.echo(text)
         return True
+    write_text(Path(json_to), text + "\n", "--json")
+    return False
+
+
+def write_text(path: Path, text: str, option: str) -> None:
+    """Write a file. Raises InputError where that is not possible."""
     try:
-        Path(json_to).write_text(text + "\n", encoding="utf-8")
+        path.write_text(text, encoding="utf-8")
     except OSError as error:
         from converter_calc.basis.errors import Fault, InputError
 
-        raise InputError([Fault("--json", f"cannot write {json_to}: {error.strerror}")]) from error
-    return False
+        raise InputError([Fault(option, f"cannot write {path}: {error.strerror}")]) from error

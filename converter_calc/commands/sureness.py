@@ -47,9 +47,9 @@ def spread(
     check_probability(0.01 * probability)
     heats, extra = as_heats(heat), None
     if tuned is not None:
-        from converter_calc.learning.tuned import load_tuned
+        from converter_calc.learning.today import load_today
 
-        learnt = load_tuned(tuned)
+        learnt = load_today(tuned).tuned
         heats, extra = learnt.apply(heats), (learnt.names, learnt.covariance)
     outcome = planned_heat(heats, charged=as_predict)
     found = spread_of(outcome, draws, seed, extra=extra)

@@ -28,6 +28,7 @@ FALSE_ALARM = 0.01
 APART = 10
 #: A jump is dated anew within this many heats once the others are known.
 NEAR = 25
+SEARCH_SPEED = 0.3
 MOST_JUMPS = 12
 #: Steps of the search for speeds and noise; a few are enough where only a jump was added.
 MOST_STEPS, FEW_STEPS = 25, 6
@@ -109,18 +110,33 @@ def follow_drift(
         walk = estimate_walk(y, H, Walk(_rough_speed(H, noise), noise, a0, P0, {}))
     else:
         walk = estimate_walk(y, H, Walk(first.speed, first.noise, a0, P0, {}), FEW_STEPS)
+    walk, jumps = find_jumps(y, H, walk, offsets)
+    forward = run_filter(y, H, walk)
+    back = look_back(y, H, forward)
+    return Drift(offsets, quantities, walk, forward, back, jumps)
+
+
+def find_jumps(
+    y: Array, H: Array, walk: Walk, offsets: tuple[str, ...]
+) -> tuple[Walk, tuple[Jump, ...]]:
+    """Jumps of the offsets, and the walk with them.
+
+    A jump passes for a fast walk at first, so the search takes slower steps than the likelihood
+    asks for; what is found must then stand with the speeds estimated beside it.
+    """
     places: list[tuple[int, int]] = []
     while len(places) < MOST_JUMPS:
-        back = look_back(y, H, run_filter(y, H, walk))
+        slow = replace(walk, speed=walk.speed * SEARCH_SPEED)
+        back = look_back(y, H, run_filter(y, H, slow))
         found = _largest_jump(_scores(back, places))
         if found is None:
             break
         places.append(found)
         walk = estimate_walk(y, H, _with_shock(walk, found, _size(back, found)), FEW_STEPS)
     walk, jumps = _settle(y, H, walk, places, offsets)
-    forward = run_filter(y, H, walk)
-    back = look_back(y, H, forward)
-    return Drift(offsets, quantities, walk, forward, back, jumps)
+    if len(jumps) < len(places):
+        walk = estimate_walk(y, H, walk, FEW_STEPS)
+    return walk, jumps
 
 
 def estimate_walk(y: Array, H: Array, first: Walk, steps: int = MOST_STEPS) -> Walk:
@@ -209,9 +225,9 @@ def _largest_jump(score: Array) -> tuple[int, int] | None:
 
 
 def _threshold(places: int) -> float:
-    from scipy.stats import norm
+    from scipy.special import ndtri
 
-    return float(norm.isf(0.5 * FALSE_ALARM / places))
+    return -float(ndtri(0.5 * FALSE_ALARM / places))
 
 
 def _size(back: Looked, place: tuple[int, int]) -> float:

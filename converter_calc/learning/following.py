@@ -11,10 +11,11 @@ import numpy as np
 
 from converter_calc.basis.dual import Array
 from converter_calc.data.tables import read_csv_rows
-from converter_calc.learning.drift import Drift, follow_drift
+from converter_calc.learning.drift import FEW_STEPS, Drift, estimate_walk, find_jumps, follow_drift
 from converter_calc.learning.replay import read_heats
 from converter_calc.learning.replay import replay as replay_log
-from converter_calc.learning.state_filter import look_back, run_filter
+from converter_calc.learning.residual import ResidualModel, fit_residual, usual_range
+from converter_calc.learning.state_filter import Walk, look_back, run_filter
 from converter_calc.learning.tuned import Tuned
 
 if TYPE_CHECKING:
@@ -118,8 +119,7 @@ def follow_log(
         first=None if before is None else before.drift.walk,
     )  # fmt: skip
     if learn < len(frame):
-        forward = run_filter(y, H, drift.walk)
-        drift = replace(drift, forward=forward, back=look_back(y, H, forward))
+        drift = _followed(drift, drift.walk, y, H)
     return Followed(tuned, names, played.predicted[:, columns], y, H, drift)
 
 
@@ -130,3 +130,70 @@ def _prior_deviations(tuned: Tuned, wander: tuple[str, ...]) -> Array:
     return np.array(
         [prior[name] / value[name] if offsets()[name] else prior[name] for name in wander]
     )
+
+
+#: Rounds in which offsets and what is left are fitted in turn.
+ROUNDS = 2
+
+
+@dataclass(frozen=True)
+class Topped:
+    """Offsets and a model of what is left, fitted together.
+
+    models : quantity -> model. added : what they add to the tuned model, (n, m). drift : the
+    offsets beside them. expected, expected_var : what is expected of each quantity above the
+    tuned model from the heats before, transformed, (n, m), and its variance.
+    """
+
+    models: dict[str, ResidualModel]
+    added: Array
+    low: Array
+    high: Array
+    drift: Drift
+    expected: Array
+    expected_var: Array
+
+
+def balance_feature(quantity: str) -> str:
+    """Name of the feature that is what the balance itself predicts, transformed."""
+    return f"balance_{quantity}"
+
+
+def top_up(
+    followed: Followed, features: list[str], X: Array, *, learn_from: int | None = None
+) -> Topped:
+    """Fit a model of what is left beside the offsets, each in turn.
+
+    What the balance predicts is a feature too: where inputs carry errors of their own, the best
+    prediction follows the balance less than fully.
+
+    features, X : names and values (n, p) of the features of the same heats. learn_from : only
+    the first so many heats are learnt from (None: all).
+    """
+    learn = len(X) if learn_from is None else learn_from
+    drift, y, H = followed.drift, followed.residuals, followed.H
+    features = [*features, *(balance_feature(name) for name in followed.names)]
+    X = np.column_stack([X, followed.predicted])
+    models: dict[str, ResidualModel] = {}
+    added = np.zeros_like(y)
+    for _ in range(ROUNDS):
+        left = y - drift.forward.expected
+        for i, name in enumerate(followed.names):
+            models[name] = fit_residual(features, X[:learn], left[:learn, i])
+            added[:, i] = models[name].predict(X)
+        if not any(model.used for model in models.values()):
+            break
+        walk = estimate_walk(y[:learn] - added[:learn], H[:learn], drift.walk, FEW_STEPS)
+        drift = _followed(drift, walk, y - added, H)
+    if added.any():  # with less noise, jumps are told that were not before
+        walk = replace(drift.walk, shocks={})
+        walk, jumps = find_jumps(y[:learn] - added[:learn], H[:learn], walk, drift.offsets)
+        drift = replace(_followed(drift, walk, y - added, H), jumps=jumps)
+    expected = drift.forward.expected + added
+    low, high = usual_range(followed.predicted[:learn])
+    return Topped(models, added, low, high, drift, expected, drift.forward.expected_var)
+
+
+def _followed(drift: Drift, walk: Walk, y: Array, H: Array) -> Drift:
+    forward = run_filter(y, H, walk)
+    return replace(drift, walk=walk, forward=forward, back=look_back(y, H, forward))

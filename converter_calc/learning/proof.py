@@ -17,10 +17,10 @@ from converter_calc.basis.dual import Array
 from converter_calc.basis.errors import Fault, InputError
 from converter_calc.data.tables import read_csv_rows
 from converter_calc.learning.features import features_of
-from converter_calc.learning.following import Followed, follow_log
+from converter_calc.learning.following import Followed, Topped, follow_log, top_up
 from converter_calc.learning.replay import HeatLog, read_heats, replay
 from converter_calc.learning.replay_quantities import quantities
-from converter_calc.learning.residual import fit_residual
+from converter_calc.learning.residual import FAR, usual_range
 from converter_calc.learning.tuned import Tuned
 from converter_calc.learning.tuning import tune
 
@@ -33,6 +33,8 @@ REGRESSION = "linear regression"
 #: Heats of which every method misses a quantity by more than so many robust deviations of the
 #: best are told beside the scores: the log is in error there, not the methods.
 MISREAD = 6.0
+#: Steps of the tuning that end it, in standard errors: what is below moves no prediction.
+SETTLED = 0.05
 
 #: fit(features (n, p), outcome (n,), later features (l, p)) -> predicted (l,). Blanks are NaN.
 Competitor = Callable[[Array, Array, Array], Array]
@@ -208,8 +210,16 @@ class Proof:
 def linear_regression(X: Array, y: Array, later: Array) -> Array:
     """Ordinary least squares on standardised features; a blank counts as the mean.
 
+    Features are drawn in to the usual range and outcomes to `FAR` robust deviations, as anybody
+    would clean them first.
+
     X : (n, p). y : (n,). later : (l, p). Returns predicted (l,).
     """
+    low, high = usual_range(X)
+    X, later = np.clip(X, low, high), np.clip(later, low, high)
+    middle = float(np.median(y))
+    far = FAR * float(np.median(np.abs(y - middle))) / 0.6745
+    y = np.clip(y, middle - far, middle + far) if far > 0.0 else y
     count = np.maximum(np.isfinite(X).sum(axis=0), 1)
     mean = np.nansum(X, axis=0) / count
     filled, blank = np.where(np.isfinite(X), X, mean), np.where(np.isfinite(later), later, mean)
@@ -270,8 +280,8 @@ def walk_forward(
         ours, sd, model_used = _stage(known, names, feature_names, X, begin, end)
         for method, values in ours.items():
             predicted[method][now] = values
-        for stated in deviation.values():
-            stated[now] = sd
+        for method, values in sd.items():
+            deviation[method][now] = values
         for name in names:
             used[name].append(model_used[name])
         for method, fit in rivals.items():
@@ -285,26 +295,31 @@ def walk_forward(
 
 def _learn(upto: pd.DataFrame, shop: Any, begin: int, before: Followed | None) -> Followed:
     """Tune on the heats before `begin`, and follow the offsets through all heats of `upto`."""
-    tuned: Tuned = tune(upto.iloc[:begin], shop, start=None if before is None else before.tuned)
+    start = None if before is None else before.tuned
+    tuned: Tuned = tune(upto.iloc[:begin], shop, start=start, step_settled=SETTLED)
     return follow_log(upto, shop, tuned, learn_from=begin, before=before)
 
 
 def _stage(
     known: Followed, names: tuple[str, ...], features: list[str], X: Array, begin: int, end: int
-) -> tuple[dict[str, Array], Array, dict[str, bool]]:
+) -> tuple[dict[str, Array], dict[str, Array], dict[str, bool]]:
     """Predictions of one stage by our three fitted methods, transformed; stated deviation."""
     columns = [known.names.index(name) for name in names]
     now = slice(begin, end)
+    topped: Topped = top_up(known, features, X[:end], learn_from=begin)
     tuned = known.predicted[now][:, columns]
-    with_drift = tuned + known.drift.forward.expected[now][:, columns]
-    sd = np.sqrt(known.drift.forward.expected_var[now][:, columns])
-    left = known.residuals[:begin] - known.drift.forward.expected[:begin]
-    added, used = np.zeros_like(with_drift), {}
-    for i, (name, column) in enumerate(zip(names, columns, strict=True)):
-        model = fit_residual(features, X[:begin], left[:, column])
-        added[:, i], used[name] = model.predict(X[now]), model.used
-    ours = {"tuned": tuned, "with drift": with_drift, "with residual": with_drift + added}
-    return ours, sd, used
+    ours = {
+        "tuned": tuned,
+        "with drift": tuned + known.drift.forward.expected[now][:, columns],
+        "with residual": np.clip(tuned, topped.low[columns], topped.high[columns])
+        + topped.expected[now][:, columns],
+    }
+    deviations = {
+        "with drift": np.sqrt(known.drift.forward.expected_var[now][:, columns]),
+        "with residual": np.sqrt(topped.expected_var[now][:, columns]),
+    }
+    used = {name: topped.models[name].used for name in names}
+    return ours, deviations, used
 
 
 def _proof(

@@ -8,7 +8,9 @@ those it was fitted to. Source of the method: A.E. Hoerl, R.W. Kennard, Technome
 from __future__ import annotations
 
 import itertools
-from dataclasses import dataclass
+from collections.abc import Mapping
+from dataclasses import asdict, dataclass
+from typing import Any
 
 import numpy as np
 
@@ -17,6 +19,7 @@ from converter_calc.basis.dual import Array
 PENALTIES = np.logspace(0.0, 5.0, 11)
 FOLDS = 4
 FAR = 3.0
+OUTERMOST = 0.005
 #: Fewer heats than this teach nothing.
 LEAST_HEATS = 80
 #: It must win by so many standard errors of the gain in mean absolute error.
@@ -27,12 +30,15 @@ CLEARLY = 1.0
 class ResidualModel:
     """One quantity: y = constant + standardised features @ slopes, or nothing where not used.
 
-    features : names (p). mean, scale : of the features. slopes : per standard deviation of a
-    feature, in the unit of y. penalty : chosen. used : whether it won. gain, gain_error : mean
-    absolute error saved out of sample and its standard error, in the unit of y.
+    features : names (p). low, high : features are drawn in to these, the range of all but the
+    outermost heats it was fitted to. mean, scale : of the features. slopes : per standard
+    deviation of a feature, in the unit of y. penalty : chosen. used : whether it won. gain,
+    gain_error : mean absolute error saved out of sample and its standard error, unit of y.
     """
 
     features: tuple[str, ...]
+    low: Array
+    high: Array
     mean: Array
     scale: Array
     constant: float
@@ -46,8 +52,44 @@ class ResidualModel:
         """What to add, (n,); zeros where the model is not used. X : (n, p), NaN where missing."""
         if not self.used:
             return np.zeros(len(X))
-        added: Array = self.constant + _standard(X, self.mean, self.scale) @ self.slopes
+        added: Array = (
+            self.constant + _standard(self.drawn_in(X), self.mean, self.scale) @ self.slopes
+        )
         return added
+
+    def document(self) -> dict[str, Any]:
+        """Everything as plain values, ready for JSON; None where a bound or scale is infinite."""
+        found = asdict(self)
+        for name in ("low", "high", "mean", "scale", "slopes"):
+            found[name] = [x if np.isfinite(x) else None for x in found[name].tolist()]
+        return {**found, "features": list(self.features),
+                "penalty": self.penalty if np.isfinite(self.penalty) else None}  # fmt: skip
+
+    @classmethod
+    def from_document(cls, document: Mapping[str, Any]) -> ResidualModel:
+        """What `document` gave. Raises KeyError, TypeError or ValueError where it is not that."""
+        blank = {"low": -np.inf, "high": np.inf, "mean": 0.0, "scale": np.inf, "slopes": 0.0}
+        arrays = {
+            name: np.array([missing if x is None else float(x) for x in document[name]])
+            for name, missing in blank.items()
+        }
+        features = tuple(str(name) for name in document["features"])
+        if any(array.shape != (len(features),) for array in arrays.values()):
+            raise ValueError("as many numbers as features are needed")
+        penalty = document["penalty"]
+        return cls(
+            features=features,
+            **arrays,
+            constant=float(document["constant"]),
+            penalty=np.inf if penalty is None else float(penalty),
+            used=bool(document["used"]),
+            gain=float(document["gain"]),
+            gain_error=float(document["gain_error"]),
+        )
+
+    def drawn_in(self, X: Array) -> Array:
+        """Features within the range that the model knows; a typing error must not carry it off."""
+        return np.clip(X, self.low, self.high)
 
 
 def fit_residual(features: list[str], X: Array, y: Array) -> ResidualModel:
@@ -68,6 +110,8 @@ def fit_residual(features: list[str], X: Array, y: Array) -> ResidualModel:
         nothing = np.zeros(X.shape[1])
         return ResidualModel(
             tuple(features),
+            nothing - np.inf,
+            nothing + np.inf,
             nothing,
             nothing + 1.0,
             0.0,
@@ -77,6 +121,8 @@ def fit_residual(features: list[str], X: Array, y: Array) -> ResidualModel:
             gain=0.0,
             gain_error=0.0,
         )
+    low, high = usual_range(X)
+    X = np.clip(X, low, high)
     edges = np.linspace(seen.size // (FOLDS + 1), seen.size, FOLDS + 1).astype(int)
     errors: list[list[Array]] = [[] for _ in PENALTIES]
     plain: list[Array] = []
@@ -97,9 +143,19 @@ def fit_residual(features: list[str], X: Array, y: Array) -> ResidualModel:
     mean, scale = _moments(X)
     ((constant, slopes),) = _ridges(_standard(X, mean, scale), y, PENALTIES[best : best + 1])
     return ResidualModel(
-        tuple(features), mean, scale, constant, slopes, float(PENALTIES[best]),
+        tuple(features), low, high, mean, scale, constant, slopes, float(PENALTIES[best]),
         gain > CLEARLY * error, gain, error,
     )  # fmt: skip
+
+
+def usual_range(X: Array) -> tuple[Array, Array]:
+    """Lowest and highest of each feature with `OUTERMOST` of the heats left out at either end."""
+    low, high = np.full(X.shape[1], -np.inf), np.full(X.shape[1], np.inf)
+    for j, column in enumerate(X.T):
+        given = column[np.isfinite(column)]
+        if given.size:
+            low[j], high[j] = np.quantile(given, [OUTERMOST, 1.0 - OUTERMOST])
+    return low, high
 
 
 def _robust_scale(size: Array) -> float:

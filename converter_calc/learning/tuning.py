@@ -83,6 +83,7 @@ def tune(
     shared_error: float = SHARED_ERROR,
     start: Tuned | Mapping[str, float] | None = None,
     step_settled: float = STEP_SETTLED,
+    progress: Callable[[int], None] | None = None,
 ) -> Tuned:
     """Parameters of a shop from its heat log.
 
@@ -93,7 +94,8 @@ def tune(
         and to leave as they are (data/tuning_parameters.csv). shared_error : correlation of the
         errors of two heats, 0 (none: only for a log whose heats have no error in common) to 1.
     start : where to start the search, the prior where not given; it makes no difference to the
-        answer. step_settled : largest step that ends it, in standard errors.
+        answer. step_settled : largest step that ends it, in standard errors. progress : told
+        after each pass over the log how many were made.
 
     Returns
     -------
@@ -117,9 +119,8 @@ def tune(
         for row in part.faults.to_dict("records")
     ]
     values = start.practice_values() if isinstance(start, Tuned) else start
-    found = search(
-        entries, summed(logs), values, shared_error=shared_error, step_settled=step_settled
-    )
+    sums = summed(logs) if progress is None else counted(summed(logs), progress)
+    found = search(entries, sums, values, shared_error=shared_error, step_settled=step_settled)
     return report(found, document, rows=len(log), faults=faults)  # type: ignore[arg-type]
 
 
@@ -133,6 +134,20 @@ def summed(logs: Sequence[HeatLog]) -> Accumulate:
         return total
 
     return accumulate
+
+
+def counted(accumulate: Accumulate, progress: Callable[[int], None]) -> Accumulate:
+    """The same sums; `progress` is told how many passes were made."""
+    passes = 0
+
+    def accumulate_and_tell(point: Point) -> NormalEquations:
+        nonlocal passes
+        found = accumulate(point)
+        passes += 1
+        progress(passes)
+        return found
+
+    return accumulate_and_tell
 
 
 def search(

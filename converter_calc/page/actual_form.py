@@ -49,16 +49,17 @@ def actual_form(
             _fields(heat, slag, recorded)
         with st.expander("Charge as it was made"):
             _fields(heat, charge, recorded)
-        wrong = st.multiselect("Take back what was wrong and has no other value", sorted(recorded),
-                               key=f"clear_{heat}", format_func=_label)  # fmt: skip
-        asked = st.form_submit_button("Record", key=f"record_actual_{heat}")
-    if not asked:
-        return
-    typed = {
-        column: str(st.session_state.get(_key(heat, column)) or "").strip()
-        for column in (*FIRST, *slag, *charge)
-    }
-    _record(name, heat, {k: text for k, text in typed.items() if text}, wrong, tell)
+        st.multiselect("Take back what was wrong and has no other value", sorted(recorded),
+                       key=f"clear_{heat}", format_func=_label)  # fmt: skip
+        st.form_submit_button("Record", key=f"record_actual_{heat}", on_click=_submit,
+                              args=(name, heat, (*FIRST, *slag, *charge), tell))  # fmt: skip
+
+
+def _submit(name: str, heat: str, columns: tuple[str, ...], tell: Tell) -> None:
+    state = st.session_state
+    typed = {column: str(state.get(_key(heat, column)) or "").strip() for column in columns}
+    typed = {column: text for column, text in typed.items() if text}
+    _record(name, heat, typed, list(state.get(f"clear_{heat}") or ()), tell)
 
 
 def _charge(recorded: Mapping[str, Any], plan: StoredPlan | None) -> list[str]:
@@ -124,5 +125,5 @@ def _record(name: str, heat: str, typed: dict[str, str], wrong: list[str], tell:
     else:
         tell("good", f"Kept as record {number} of heat {heat}.")
         for column in typed:
-            del st.session_state[_key(heat, column)]
-    st.rerun(scope="fragment")
+            st.session_state[_key(heat, column)] = ""
+        st.session_state[f"clear_{heat}"] = []

@@ -42,18 +42,19 @@ class Learnt:
 
 def value_in(form: Form, name: str) -> float:
     """The number of a learnt parameter in the fields; NaN where there is none."""
-    if name.endswith(YIELD) and name not in parameters():
-        fields = form.rest.get("materials", {}).get(name.removesuffix(YIELD), {})
-        found = fields.get("yield_factor") if isinstance(fields, Mapping) else None
-        return float(found) if isinstance(found, int | float) else math.nan
+    if _is_yield(name):
+        found = _yield_of(form, name)
+        return math.nan if found is None else found
     try:
         return parse_number(form.fields.get(name, ""))
     except ValueError:
         return math.nan
 
 
-def taken(form: Form, tuned: Tuned, source: str) -> tuple[Form, Learnt]:
-    """The fields with learnt parameters in them, and what the spread has to know of these.
+def taken(
+    form: Form, tuned: Tuned, source: str
+) -> tuple[Form, Learnt, dict[str, str | float | None]]:
+    """The fields with learnt parameters, what the spread has to know of these, and what was before.
 
     source : where they come from, for the note beside the spread. Parameters that the log could
     not tell stay as the fields have them.
@@ -61,15 +62,51 @@ def taken(form: Form, tuned: Tuned, source: str) -> tuple[Form, Learnt]:
     new = form.copy()
     told = [k for k, entry in enumerate(tuned.parameters) if not entry.held]
     values: dict[str, float] = {}
+    before: dict[str, str | float | None] = {}
     for k in told:
-        entry = tuned.parameters[k]
-        text = f"{entry.value:.{DIGITS}g}"
-        values[entry.name] = float(text)
-        if entry.name.endswith(YIELD) and entry.name not in parameters():
-            own = new.rest.setdefault("materials", {})
-            material = entry.name.removesuffix(YIELD)
-            own[material] = {**own.get(material, {}), "yield_factor": float(text)}
+        name, text = tuned.parameters[k].name, f"{tuned.parameters[k].value:.{DIGITS}g}"
+        values[name] = float(text)
+        if _is_yield(name):
+            before[name] = _yield_of(new, name)
+            _put_yield(new, name, float(text))
         else:
-            new.fields[entry.name] = number_text(float(text))
+            before[name] = new.fields.get(name, "")
+            new.fields[name] = number_text(float(text))
     covariance = np.asarray(tuned.covariance, dtype=float)[np.ix_(told, told)]
-    return new, Learnt(values, covariance, source)
+    return new, Learnt(values, covariance, source), before
+
+
+def restored(form: Form, before: Mapping[str, str | float | None]) -> Form:
+    """The fields with the values that stood in them before `taken`."""
+    new = form.copy()
+    for name, x in before.items():
+        if _is_yield(name):
+            _put_yield(new, name, x)
+        else:
+            new.fields[name] = str(x)
+    return new
+
+
+def _is_yield(name: str) -> bool:
+    return name.endswith(YIELD) and name not in parameters()
+
+
+def _yield_of(form: Form, name: str) -> float | None:
+    fields = form.rest.get("materials", {}).get(name.removesuffix(YIELD), {})
+    found = fields.get("yield_factor") if isinstance(fields, Mapping) else None
+    return float(found) if isinstance(found, int | float) else None
+
+
+def _put_yield(form: Form, name: str, x: float | str | None) -> None:
+    """Set the yield factor of a scrap, or take it out; a material left empty goes too."""
+    material = name.removesuffix(YIELD)
+    own = form.rest.get("materials", {})
+    fields = {key: value for key, value in own.get(material, {}).items() if key != "yield_factor"}
+    if x is not None:
+        fields["yield_factor"] = x
+    own = {key: value for key, value in own.items() if key != material}
+    if fields:
+        own[material] = fields
+    form.rest.pop("materials", None)
+    if own:
+        form.rest["materials"] = own

@@ -89,7 +89,8 @@ def cell(x: Any, digits: int, sign: str = "") -> str:
     value = float(x)
     if not math.isfinite(value):
         return "–"
-    return f"{round(value, digits) + 0.0:{sign},.{digits}f}"
+    shown = round(value, digits) + 0.0  # no "-0"
+    return f"{shown:{sign if shown else ''},.{digits}f}"
 
 
 def save_tables(view: str, sheets: Mapping[str, pd.DataFrame], names: Sequence[str] = ()) -> None:

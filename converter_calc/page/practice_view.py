@@ -134,12 +134,13 @@ def _side_by_side(comparison: Comparison) -> Any:
             for found, (chain, i) in zip(numbers, chains, strict=True)
         ]
         if column.unit == "relative":
-            cells = [f"{x:.0e}" if np.isfinite(x) else "–" for x in row]
+            cells = ["0" if x == 0.0 else f"{x:.0e}" if np.isfinite(x) else "–" for x in row]
         elif all(x == 0.0 or not np.isfinite(x) for x in row):
             continue
         else:
-            cells = [cell(x, DIGITS.get(column.unit, 2)) for x in row]
-        label = f"{column.label}, {shown_unit(column.unit)}".rstrip(", ")
+            digits = 2 if key in ("T_Fe_pct", "slag_P2O5_pct") else DIGITS.get(column.unit, 2)
+            cells = [cell(x, digits) for x in row]
+        label = f"{formula(column.label)}, {shown_unit(column.unit)}".rstrip(", ")
         rows.append((label, *cells))
     heads = ("", *(TITLES[name] for name in comparison.chains))
     return table_html("practices side by side", heads, rows, wide=True)

@@ -24,7 +24,6 @@ from converter_calc.page.session import (
     guarded,
     replace_form,
     view_choice,
-    view_field,
     write_address,
 )
 from converter_calc.planning.outcome import Outcome
@@ -48,7 +47,9 @@ PLAN_ROWS = ("hot_metal_kg", "scrap_total_kg", "oxygen_Nm3", "aim_temp_C", "aim_
              "aim_P_pct", "end_temp_C", "end_C_pct", "end_P_pct", "steel_kg")  # fmt: skip
 UNITS = {"C": "°C", "Nm3": "Nm³", "mass %": "%", "mass ppm": "ppm"}
 PARQUET = "application/vnd.apache.parquet"
-keep_in_address("register", ("part", "file", "heat", "state"))
+#: Key of the heat that is looked at.
+HEAT = "register_heat"
+keep_in_address("register", ("part", "file", "state"))
 
 
 def register_view() -> None:
@@ -115,7 +116,7 @@ def _record(name: str, outcome: Outcome, document: dict[str, Any]) -> None:
         _tell("fault", "The plan was not recorded:", fault_texts(error.faults))
         return
     _tell("good", f"Kept as plan {number} of heat {outcome.heats.ids[0]}.")
-    st.session_state["register.heat"] = outcome.heats.ids[0]
+    st.session_state[HEAT] = outcome.heats.ids[0]
 
 
 # --- the heats --------------------------------------------------------------------------------
@@ -137,9 +138,9 @@ def _heats(name: str) -> None:
         put(_list_html(table.head(LISTED)))
         if len(table) > LISTED:
             put(f"The {LISTED} newest of {len(table):,}; type a part of the name to find others.")
-        if st.session_state.get("register.heat") not in (None, "", *ids):
-            ids.insert(0, st.session_state["register.heat"])
-        heat = view_choice("register", "heat", "Heat to look at", ids, width=WIDE_PX)
+        if st.session_state.get(HEAT) not in ids:
+            st.session_state[HEAT] = ids[0]
+        heat = st.selectbox("Heat to look at", ids, key=HEAT, width=WIDE_PX)
         guarded(partial(_one_heat, book, name, heat))
 
 
@@ -171,8 +172,11 @@ def _cell(x: Any, unit: str, *, signed: bool = False) -> str:
 
 
 def _list_html(table: pd.DataFrame) -> Any:
-    columns = [("aim_temp_C", "C"), ("end_temp_C", "C"), ("aim_C_pct", "mass %"),
-               ("end_C_pct", "mass %"), ("aim_P_pct", "mass %"), ("end_P_pct", "mass %")]  # fmt: skip
+    columns = [
+        (f"{which}_{name}", unit)
+        for name, unit in (("temp_C", "C"), ("C_pct", "mass %"), ("P_pct", "mass %"))
+        for which in ("aim", "end")
+    ]
     rows = [
         (row["heat_id"], _moment(row["planned_at"]), _moment(row["tapped_at"]),
          *(_cell(row[column], unit) for column, unit in columns))

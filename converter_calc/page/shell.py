@@ -13,6 +13,7 @@ from converter_calc.page import session
 from converter_calc.page.address import VIEW
 from converter_calc.page.balance_view import balance_view
 from converter_calc.page.files_view import files_view
+from converter_calc.page.learning_view import learning_view
 from converter_calc.page.lime_view import lime_view
 from converter_calc.page.markup import fault_texts, note, put, put_style
 from converter_calc.page.plan_view import plan_view
@@ -31,6 +32,7 @@ VIEWS = {
     "practice": ("Slag practice", practice_view),
     "tap": ("Tap and ladle", tap_view),
     "register": ("Register", register_view),
+    "learning": ("Learning", learning_view),
     "files": ("Files", files_view),
 }
 

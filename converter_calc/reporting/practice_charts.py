@@ -48,8 +48,8 @@ def practices_figure(
         rows=rows, cols=COLUMNS, shared_yaxes=True, horizontal_spacing=0.04,
         vertical_spacing=0.36 / rows, subplot_titles=[title for _, title, _ in panels],
     )  # fmt: skip
-    figure.update_layout(layout(theme, 70 + 165 * rows, width))
-    figure.update_layout(bargap=0.35, margin={"l": 10, "r": 10, "t": 40, "b": 10})
+    figure.update_layout(layout(theme, 86 + 165 * rows, width))
+    figure.update_layout(bargap=0.35, margin={"l": 10, "r": 10, "t": 56, "b": 10})
     for place, (column, title, digits) in enumerate(panels):
         row, col = place // COLUMNS + 1, place % COLUMNS + 1
         x = np.where(solved, table[column].to_numpy(float), np.nan)
@@ -105,7 +105,8 @@ def shares_figure(frame: pd.DataFrame, theme: str = "light", width: int | None =
     figure = go.Figure(bars, layout(theme, 120 + 32 * len(frame), width, legend=True))
     figure.update_layout(
         barmode="stack", font={"color": text},
-        xaxis=axis(theme, "share of the element charged, %", range=[0.0, 100.0]),
+        legend={"traceorder": "normal"},
+        xaxis=axis(theme, "share of the element charged, %", range=[0.0, 100.5], dtick=20),
         yaxis=axis(theme, "element", autorange="reversed", type="category"),
     )  # fmt: skip
     return figure

@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from typing import TYPE_CHECKING
+import math
+from typing import TYPE_CHECKING, Any
 
 from converter_calc.reporting.html_sheet import Markup, element, joined
 from converter_calc.reporting.learning_charts import (
@@ -75,6 +76,27 @@ def proof_text(proof: Proof) -> str:
     lines += ["", _residual_line(proof), "", "For context, not our result:"]
     lines += [f"  {text}" for text in ANCHORS]
     return "\n".join(lines) + "\n"
+
+
+def proof_document(proof: Proof) -> dict[str, Any]:
+    """Scores and calibration as plain values, ready for JSON."""
+
+    def rows(table: pd.DataFrame) -> list[dict[str, Any]]:
+        return [
+            {str(key): None if isinstance(x, float) and not math.isfinite(x) else x
+             for key, x in row.items()}
+            for row in table.to_dict("records")
+        ]  # fmt: skip
+
+    return {
+        "heats": len(proof.rows),
+        "stages": len(proof.stages),
+        "scores": rows(proof.scores()),
+        "scores_without_misread": rows(proof.scores(without_misread=True)),
+        "intervals": rows(proof.calibration()),
+        "hit_chances": rows(proof.hit_chances()),
+        "residual_used_share": dict(proof.residual_used),
+    }
 
 
 def _misread_lines(proof: Proof) -> list[str]:

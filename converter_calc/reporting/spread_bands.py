@@ -148,7 +148,7 @@ def band_text(d: Distribution, window: Window) -> str:
 
 def chance_rows(found: Spread) -> list[tuple[str, ...]]:
     """Each window: name, window, chance, its interval."""
-    rows = []
+    rows: list[tuple[str, ...]] = []
     for c in (*found.chances, found.all_windows):
         span = f"{percent(c.low, 1)} to {percent(c.high, 1)}"
         text = "" if c.window is None else window_text(c.window)

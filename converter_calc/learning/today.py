@@ -1,0 +1,344 @@
+"""What the log says of the heat to come: parameters of today, and what is left on top.
+
+A plan aims the balance past what heats of its kind have shown above it, so that the heat itself
+ends at the aim; a prediction adds it.
+"""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Mapping
+from dataclasses import dataclass
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from converter_calc.balance.heats import HeatTable
+from converter_calc.basis.dual import Array
+from converter_calc.basis.errors import Fault, InputError
+from converter_calc.learning.features import PLAIN, features_of
+from converter_calc.learning.following import (
+    FOLLOWED,
+    Followed,
+    Topped,
+    balance_feature,
+    follow_log,
+    offsets,
+    top_up,
+)
+from converter_calc.learning.replay_quantities import quantities
+from converter_calc.learning.residual import ResidualModel
+from converter_calc.learning.tuned import LARGEST_FILE_BYTES, Tuned, tuned_from
+from converter_calc.learning.tuning import tune
+from converter_calc.planning.outcome import Caution, Outcome
+from converter_calc.planning.plan import (
+    plan_heats,
+    predict_heats,
+    raise_unless_closed,
+    raise_unless_solved,
+)
+from converter_calc.planning.solving import with_values
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+FORMAT = "converter-calc offsets of the day"
+VERSION = 1
+#: Aims moved by what is left: aim -> quantity.
+AIMS = {"aim_temp_C": "end_temp_C", "aim_C_pct": "end_C_pct", "aim_P_pct": "end_P_pct"}
+#: Plans made until what is left, which depends on the plan itself, stands still.
+PLANS = 6
+#: The correction of a logarithm, or of a temperature [K], is not trusted beyond this.
+MOST = {"end_temp_C": 40.0, "end_C_pct": 0.7, "end_P_pct": 0.7, "end_Mn_pct": 0.7}
+
+
+@dataclass(frozen=True)
+class Today:
+    """What a log says of the heat after its last.
+
+    tuned : parameters with today's offsets and their covariance. models : quantity -> what is
+    left, used only where it won out of sample. scatter : quantity -> standard deviation of a
+    heat about its prediction, transformed. as_of : time of the last heat of the log. jumps :
+    (time, heat_id, parameter, size, standard error) of the step changes found.
+    """
+
+    tuned: Tuned
+    models: Mapping[str, ResidualModel]
+    scatter: Mapping[str, float]
+    as_of: str
+    jumps: tuple[tuple[str, str, str, float, float], ...]
+
+    def left(self, outcome: Outcome) -> dict[str, Array]:
+        """What heats like these have shown above the balance, (n,) each, transformed.
+
+        Limited to `MOST`; zero where no model won.
+        """
+        frame = _frame_of(outcome)
+        materials = [name for name, m in outcome.heats.materials.items() if m is not None]
+        names, X = features_of(frame, materials)
+        ends = outcome.columns()
+        for quantity in FOLLOWED:
+            if quantity in ends:
+                names.append(balance_feature(quantity))
+                value = quantities()[quantity].transformed(np.asarray(ends[quantity], dtype=float))
+                X = np.column_stack([X, value])
+        found = {}
+        for quantity, model in self.models.items():
+            if not model.used:
+                continue
+            columns = np.full((outcome.n, len(model.features)), np.nan)
+            for j, feature in enumerate(model.features):
+                if feature in names:
+                    columns[:, j] = X[:, names.index(feature)]
+                elif feature.endswith("_kg_per_t"):
+                    columns[:, j] = 0.0
+            most = MOST[quantity]
+            found[quantity] = np.clip(model.predict(columns), -most, most)
+        return found
+
+    def document(self) -> dict[str, Any]:
+        """Everything as plain values, ready for JSON."""
+        return {
+            "format": FORMAT,
+            "version": VERSION,
+            "as_of": self.as_of,
+            "tuned": self.tuned.document(),
+            "scatter": dict(self.scatter),
+            "jumps": [list(jump) for jump in self.jumps],
+            "left": {name: model.document() for name, model in self.models.items()},
+        }
+
+    def save(self, path: str | Path) -> None:
+        """Write a JSON file; raises InputError where it cannot be written."""
+        text = json.dumps(self.document(), indent=1, allow_nan=False)
+        try:
+            Path(path).write_text(text + "\n", encoding="utf-8")
+        except OSError as error:
+            raise InputError([Fault(str(path), f"cannot be written: {error.strerror}")]) from error
+
+
+def learn(
+    frame: pd.DataFrame, shop: str | Mapping[str, Any], *, tuned: Tuned | None = None
+) -> tuple[Today, Followed, Topped]:
+    """Tune on a log, follow its offsets to the end, and fit what is left.
+
+    Parameters
+    ----------
+    frame : heat log; taken in the order of tapped_at. shop : shop file or its content. tuned :
+        parameters to follow from, tuned on the log where not given.
+
+    Raises InputError where no heat of the log can be used, or the shop is wrong.
+    """
+    frame = in_time_order(frame)
+    tuned = tune(frame, shop) if tuned is None else tuned
+    followed = follow_log(frame, shop, tuned)
+    names, X = features_of(frame, _materials_of(frame))
+    topped = top_up(followed, names, X)
+    ids, times = frame["heat_id"].tolist(), frame["tapped_at"].astype(str).tolist()
+    jumps = tuple(
+        (times[jump.row], str(ids[jump.row]), jump.offset, jump.size, jump.standard_error)
+        for jump in topped.drift.jumps
+    )
+    offset, cov = topped.drift.today
+    scatter = dict(zip(followed.names, topped.drift.walk.noise.tolist(), strict=True))
+    today = Today(followed.at(offset, cov), topped.models, scatter, times[-1], jumps)
+    return today, followed, topped
+
+
+def in_time_order(frame: pd.DataFrame) -> pd.DataFrame:
+    """The log by tapped_at; heats without a time keep their place at the end.
+
+    Raises InputError for an empty log or one without tapped_at.
+    """
+    if not len(frame):
+        raise InputError([Fault("log", "holds no heat")])
+    if "tapped_at" not in frame or frame["tapped_at"].isna().all():
+        raise InputError([Fault("tapped_at", "not given; to follow a drift, heats need a time")])
+    return frame.sort_values("tapped_at", kind="stable").reset_index(drop=True)
+
+
+def plan_today(heats: HeatTable, today: Today) -> list[tuple[Array, Outcome]]:
+    """Plan heats with today's parameters, the balance aimed past what is left.
+
+    Returns (row numbers, outcome) of each group, as `plan_heats`; a caution tells where the aims
+    of the balance were moved. The end point of the outcome is that of the balance; the heat
+    itself is expected at the aims given.
+    """
+    tuned = today.tuned.apply(heats)
+    groups = plan_heats(tuned)
+    if not any(model.used for model in today.models.values()):
+        return groups
+    moved = tuned
+    for _ in range(PLANS):
+        left = {name: np.zeros(heats.n) for name in AIMS}
+        for rows, outcome in groups:
+            found = today.left(outcome)
+            for aim, quantity in AIMS.items():
+                if quantity in found:
+                    good = np.array([status == "solved" for status in outcome.status])
+                    left[aim][rows] = np.where(good, found[quantity], 0.0)
+        moved = with_values(tuned, **_moved_aims(tuned, left))
+        groups = plan_heats(moved)
+    for rows, outcome in groups:
+        _tell(outcome, tuned.take(rows) if len(rows) < heats.n else tuned)
+    return groups
+
+
+def plan_one(heats: HeatTable, today: Today) -> Outcome:
+    """One heat planned with today's parameters.
+
+    Raises InputError for more heats than one, InfeasibleError and ConvergenceError as `plan`.
+    """
+    if heats.n != 1:
+        raise InputError([Fault("heat", f"one heat is asked for, given {heats.n}")])
+    ((_, outcome),) = plan_today(heats, today)
+    raise_unless_solved(outcome)
+    raise_unless_closed(outcome)
+    return outcome
+
+
+def expected_end(outcome: Outcome, today: Today) -> dict[str, tuple[Array, Array]]:
+    """(expected, standard deviation) of each quantity that is followed, own units, (n,) each.
+
+    The deviation is that of a heat about its prediction, scatter of the log; for quantities
+    compared by logarithm it is value x share.
+    """
+    left = today.left(outcome)
+    columns = outcome.columns()
+    found = {}
+    for name, sd in today.scatter.items():
+        quantity = quantities()[name]
+        value = np.asarray(columns[name], dtype=float)
+        at = quantity.plain(quantity.transformed(value) + left.get(name, 0.0))
+        found[name] = (at, at * sd if quantity.log else np.full(outcome.n, sd))
+    return found
+
+
+def predict_today(heats: HeatTable, today: Today) -> list[tuple[Array, Outcome]]:
+    """Predict heats with today's parameters; `expected_end` adds what is left."""
+    return predict_heats(today.tuned.apply(heats))
+
+
+def load_today(path: str | Path) -> Today:
+    """Offsets of the day from a file that `Today.save` wrote.
+
+    Raises InputError, one clear line, for a file that is missing, broken or of another kind.
+    """
+    path = Path(path)
+    try:
+        if path.stat().st_size > LARGEST_FILE_BYTES:
+            raise InputError([Fault(str(path), "is too large for a file of offsets")])
+        document = json.loads(path.read_text(encoding="utf-8"))
+    except OSError as error:
+        raise InputError([Fault(str(path), f"cannot be read: {error.strerror}")]) from error
+    except (ValueError, RecursionError) as error:
+        raise InputError([Fault(str(path), f"is not JSON: {error}")]) from error
+    return today_from(document, str(path))
+
+
+def today_from(document: Any, place: str = "offsets") -> Today:
+    """What `Today.document` gave, or tuned parameters alone (`Tuned.document`).
+
+    Raises InputError where it is neither, or a value is impossible.
+    """
+    if isinstance(document, Mapping) and document.get("format") != FORMAT:
+        return Today(tuned_from(document, place), {}, {}, "", ())
+    if not isinstance(document, Mapping) or document.get("version") != VERSION:
+        raise InputError([Fault(place, f"is no file of offsets this program reads ({VERSION})")])
+    try:
+        scatter = {str(name): float(x) for name, x in document["scatter"].items()}
+        models = {
+            str(name): ResidualModel.from_document(entry)
+            for name, entry in document["left"].items()
+        }
+        jumps = tuple(
+            (str(a), str(b), str(c), float(d), float(e)) for a, b, c, d, e in document["jumps"]
+        )
+        _ = [MOST[name] for name in (*models, *scatter)]
+        as_of, tuned = str(document["as_of"]), document["tuned"]
+    except (KeyError, TypeError, ValueError, AttributeError) as error:
+        raise InputError([Fault(place, f"is incomplete or misshapen: {error}")]) from error
+    return Today(tuned_from(tuned, place), models, scatter, as_of, jumps)
+
+
+def drift_table(frame: pd.DataFrame, followed: Followed, drift: Any) -> pd.DataFrame:
+    """Each wandering parameter through the log: tapped_at, offset, value, deviation.
+
+    Given all heats (smoothed); values and deviations in the unit of the parameter. frame : the
+    log in time order. drift : of `followed`, or of `top_up`.
+    """
+    import pandas as pd
+
+    tuned = followed.tuned.practice_values()
+    parts = []
+    for j, name in enumerate(drift.offsets):
+        at, sd = drift.back.smoothed[:, j], drift.back.smoothed_sd[:, j]
+        value = tuned[name] * np.exp(at) if offsets()[name] else tuned[name] + at
+        parts.append(
+            pd.DataFrame(
+                {
+                    "tapped_at": frame["tapped_at"],
+                    "offset": name,
+                    "value": value,
+                    "deviation": value * sd if offsets()[name] else sd,
+                }
+            )
+        )
+    return pd.concat(parts, ignore_index=True)
+
+
+def _materials_of(frame: pd.DataFrame) -> list[str]:
+    """Materials that a log has a column for."""
+    known = ("hot_metal_kg", "steel_kg")
+    return [
+        name[:-3] for name in map(str, frame.columns) if name.endswith("_kg") and name not in known
+    ]
+
+
+def _frame_of(outcome: Outcome) -> pd.DataFrame:
+    """A planned heat as a row of a log: readings of its charge."""
+    import pandas as pd
+
+    n, heats = outcome.n, outcome.heats
+    columns: dict[str, Any] = {}
+    for name in PLAIN:
+        element = name.removeprefix("hm_").removesuffix("_pct")
+        x = heats.hm_pct.get(element) if name.startswith("hm_") else heats.values.get(name)
+        columns[name] = np.full(n, np.nan) if x is None else x
+    for name, x in outcome.recipe().items():
+        if name.endswith("_kg") or name == "oxygen_Nm3":
+            columns[name] = np.broadcast_to(np.asarray(x, dtype=float), (n,))
+    return pd.DataFrame(columns)
+
+
+def _moved_aims(heats: HeatTable, left: Mapping[str, Array]) -> dict[str, Array]:
+    aims = {}
+    for aim, quantity in AIMS.items():
+        given = heats.values[aim]
+        if quantities()[quantity].log:
+            aims[aim] = given * np.exp(-left[aim])
+        else:
+            aims[aim] = given - left[aim]
+    return aims
+
+
+def _tell(outcome: Outcome, wanted: HeatTable) -> None:
+    """Say where the balance aims elsewhere than the heat."""
+    texts = {
+        "aim_temp_C": ("temperature", "C", ".0f"),
+        "aim_C_pct": ("carbon", "%", ".4f"),
+        "aim_P_pct": ("phosphorus", "%", ".4f"),
+    }
+    for aim, (name, unit, digits) in texts.items():
+        now, given = outcome.heats.values[aim], wanted.values[aim]
+        mask = np.isfinite(given) & (np.abs(now - given) > 1e-6 * np.abs(given))
+        if mask.any():
+            text = (
+                f"the balance aims at {{now:{digits}}} {unit} {name} for an aim of "
+                f"{{given:{digits}}} {unit}: heats like this have ended so far off it"
+            )
+            outcome.cautions.append(
+                Caution("learnt-aim", f"aim.{aim.removeprefix('aim_')}", mask, text,
+                        {"now": now, "given": given})
+            )  # fmt: skip
