@@ -364,6 +364,7 @@ def test_learning_on_the_page(learnt: dict[str, Any], log: bytes, shop: dict[str
     app = show(app, "Plan a heat", sureness=True)
     assert "uncertainty of the parameters from the end of log.csv" in texts(app)
     app = show(app, "Learning")
+    print("PART", app.session_state["learning.part"], app.session_state["cc_views"], "cc_before_learnt" in app.session_state, [b.key for b in app.button])
     app = press(app, "undo_take_today")
     assert document_of(app.session_state["cc_form"]) == document_of(
         form_of(whole("ordinary_low_carbon"))

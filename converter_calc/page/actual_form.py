@@ -49,8 +49,9 @@ def actual_form(
             _fields(heat, slag, recorded)
         with st.expander("Charge as it was made"):
             _fields(heat, charge, recorded)
-        st.multiselect("Take back what was wrong and has no other value", sorted(recorded),
-                       key=f"clear_{heat}", format_func=_label)  # fmt: skip
+        if recorded:
+            st.multiselect("Take back what was wrong and has no other value", sorted(recorded),
+                           key=f"clear_{heat}", format_func=_label)  # fmt: skip
         st.form_submit_button("Record", key=f"record_actual_{heat}", on_click=_submit,
                               args=(name, heat, (*FIRST, *slag, *charge), tell))  # fmt: skip
 
@@ -126,4 +127,4 @@ def _record(name: str, heat: str, typed: dict[str, str], wrong: list[str], tell:
         tell("good", f"Kept as record {number} of heat {heat}.")
         for column in typed:
             st.session_state[_key(heat, column)] = ""
-        st.session_state[f"clear_{heat}"] = []
+        st.session_state.pop(f"clear_{heat}", None)

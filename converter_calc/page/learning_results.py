@@ -66,7 +66,8 @@ def tuning(found: dict[str, Any], source: str) -> None:
              "tuned"),
             tables.fit_rows(tuned), numeric=2, wide=True,
         ),
-        note("note", "", [IN_SAMPLE, *ANCHORS]),
+        note("note", IN_SAMPLE),
+        note("note", "For context, not our result:", ANCHORS),
     )  # fmt: skip
     _gross(tuned)
 
@@ -95,7 +96,7 @@ def _save_tuned(tuned: Tuned, source: str) -> None:
         name = registers.register_names()[0]
         st.button(f"Keep them in the register {name}", key="keep_tuned", on_click=_keep,
                   args=(name, tuned, source))  # fmt: skip
-    put("The file serves `converter-calc plan`, `predict` and `spread` with `--tuned`.")
+    put("The file serves converter-calc plan, predict and spread with --tuned.")
 
 
 def json_of(learnt: Tuned | Today) -> str:
@@ -242,6 +243,9 @@ def proof(found: dict[str, Any], _: str) -> None:
         show_figure(charts.calibration_figure(table, shade), key, tables.calibration_text(table))
         if key == "intervals":
             put(table_html(key, *tables.calibration_rows(table)))
+        else:
+            put(table_html(key, ("quantity", "stated, %", "held, %", "heats"),
+                           tables.hit_rows(table)))  # fmt: skip
     put(note("note", "For context, not our result:", ANCHORS))
     with st.container(horizontal=True):
         # what runs after the click has no session: everything it needs is bound here

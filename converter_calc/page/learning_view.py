@@ -113,7 +113,7 @@ def _from_file() -> None:
                             max_upload_size=5)  # fmt: skip
     mark, skip = reading_choices("learning")
     if file is None:
-        put("Up to 5 MB here; `converter-calc tune` takes longer logs.")
+        put("Up to 5 MB here; converter-calc tune takes longer logs.")
         return
     key = (file.file_id, mark, skip)
     if st.session_state.get("cc_log_key") != key:

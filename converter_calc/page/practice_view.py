@@ -142,7 +142,7 @@ def _side_by_side(comparison: Comparison) -> Any:
             cells = [cell(x, digits) for x in row]
         label = f"{formula(column.label)}, {shown_unit(column.unit)}".rstrip(", ")
         rows.append((label, *cells))
-    heads = ("", *(TITLES[name] for name in comparison.chains))
+    heads = ("per heat", *(TITLES[name] for name in comparison.chains))
     return table_html("practices side by side", heads, rows, wide=True)
 
 
@@ -193,7 +193,7 @@ def _opened(name: str, chain: Chain, i: int) -> None:
             for el, c in chain.closures().items()
         ]
         put(heading("Closure over all stages"))
-        put(table_html(f"closure of {title}", ("", "in, kg (energy: MJ)", "out", "relative"),
+        put(table_html(f"closure of {title}", ("element", "in, kg (energy: MJ)", "out", "relative"),
                        closures))  # fmt: skip
         lines = [f"{h.name}: worst gap {float(at(h.worst(), i)):.0e}" for h in chain.handovers]
         if lines:
@@ -225,7 +225,7 @@ def _slag() -> None:
     put("Each number with its definition or source.")
     terms = product.terms()
     rows = [(formula(t.label), _slag_cell(t), shown_unit(t.unit), t.source) for t in terms]
-    put(table_html("slag as a product", ("", "value", "unit", "definition or source"), rows,
+    put(table_html("slag as a product", ("quantity", "value", "unit", "definition or source"), rows,
                    numeric={1}))  # fmt: skip
     if "softens_C" not in product.document():
         put(note("note", "No melting hint: the slag is outside what the hint was made for."))

@@ -28,6 +28,7 @@ from converter_calc.page.session import (
 )
 from converter_calc.planning.outcome import Outcome
 from converter_calc.register.register import Register
+from converter_calc.reporting.learning_tables import words_of
 from converter_calc.reporting.register_text import number_text
 
 if TYPE_CHECKING:
@@ -223,7 +224,7 @@ def _plans(book: Register, heat: str, plans: pd.DataFrame, *, made: bool) -> Non
         if column in stored.planned:
             unit = "kg" if column == "scrap_total_kg" else _unit(column)
             text = _cell(stored.planned[column], unit)
-            rows.append((column.replace("_", " "), text, UNITS.get(unit, unit)))
+            rows.append((words_of(column), text, UNITS.get(unit, unit)))
     put(
         f"Plan {plan_id} of {_moment(stored.created_at)} UTC; converter-calc "
         f"{stored.package_version}, data {stored.model_version}.",
@@ -260,7 +261,7 @@ def _compare(book: Register, heat: str, plan_id: int) -> None:
         index=False
     ):
         rows.append(
-            (str(quantity).replace("_", " "), UNITS.get(unit, unit),
+            (words_of(str(quantity)), UNITS.get(unit, unit),
              *(_cell(x, unit) for x in (aim, planned, actual)),
              _cell(difference, unit, signed=True), _cell(expected, unit),
              _cell(left, unit, signed=True))
@@ -320,8 +321,9 @@ def _out(name: str) -> None:
     today = dt.datetime.now(tz=dt.UTC).date().isoformat()
     stem = name.rpartition(".")[0] or name
     with st.container(horizontal=True):
-        for ending, mime in ((".csv", "text/csv"), (".parquet", PARQUET), (".xlsx", XLSX)):
-            st.download_button(f"Heat log ({ending[1:].upper()})",
+        for ending, kind, mime in ((".csv", "CSV", "text/csv"), (".parquet", "Parquet", PARQUET),
+                                   (".xlsx", "XLSX", XLSX)):  # fmt: skip
+            st.download_button(f"Heat log ({kind})",
                                partial(registers.exported, name, ending), f"heat_log{ending}",
                                mime, key="log_out" + ending, on_click="ignore")  # fmt: skip
         st.download_button("Backup of the register", partial(registers.backed_up, name),

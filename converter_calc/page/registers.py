@@ -97,7 +97,7 @@ def as_file(content: bytes, name: str) -> Iterator[Path]:
     """An upload as a file in a folder of its own, which is gone afterwards."""
     if len(content) > MOST_LOG_BYTES:
         size = f"{len(content) / 1e6:.1f} MB, {MOST_LOG_BYTES / 1e6:g} MB are allowed here"
-        message = f"has {size}; `converter-calc log import` takes any length"
+        message = f"has {size}; converter-calc log import takes any length"
         raise InputError([Fault(name[:MOST_NAME_SIGNS], message)])
     plain = re.sub(r"[^\w.\- ]", "_", name)[-MOST_NAME_SIGNS:].lstrip(". ") or "log"
     with tempfile.TemporaryDirectory(prefix="converter_calc_") as folder:

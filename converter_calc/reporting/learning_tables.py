@@ -16,10 +16,12 @@ if TYPE_CHECKING:
     from converter_calc.learning.proof import Proof
 
 UNITS = {"C": "°C", "mass %": "%", "Nm3": "Nm³", "MJ/t steel": "MJ/t", "kg/t steel": "kg/t"}
+#: Figures of a formula as it is printed.
+LOWERED = str.maketrans("0123456789", "₀₁₂₃₄₅₆₇₈₉")
 #: Parts of names of parameters and outcomes in words.
 WORDS = {
     "MJ_per_t": "a tonne", "MJ_per_min": "a minute", "pct": "", "C": "", "kg": "", "ppm": "",
-    "factor": "factor", "temp": "temperature",
+    "Nm3": "", "min": "", "temp": "temperature", "hm": "hot metal",
 }  # fmt: skip
 
 
@@ -27,9 +29,15 @@ def plain(x: float, *, signed: bool = False) -> str:
     """A number with four digits that count; a dash where there is none."""
     if not math.isfinite(x):
         return "–"
-    text = f"{x:+.4g}" if signed else f"{x:.4g}"
-    if "e" in text:
-        text = f"{x:+,.0f}" if signed else f"{x:,.0f}"
+    sign = "+" if signed else ""
+    if x == 0.0:
+        text = "0"
+    elif abs(x) >= 1e4:
+        text = f"{x:{sign},.0f}"
+    elif abs(x) < 1e-3:
+        text = f"{x:{sign}.2g}" if abs(x) >= 1e-4 else f"{x:{sign}.6f}"
+    else:
+        text = f"{x:{sign}.4g}"
     return text.replace("-", "−")
 
 
@@ -50,7 +58,8 @@ def words_of(name: str) -> str:
     ]
     if name.endswith("_C_pct"):
         parts[-2] = "C"
-    return " ".join(part for part in parts if part)
+    text = " ".join(part for part in parts if part)
+    return text.translate(LOWERED) if name.startswith("slag_") else text
 
 
 def parameter_rows(tuned: Tuned) -> list[tuple[str, ...]]:
@@ -103,7 +112,7 @@ def used_lines(tuned: Tuned) -> list[str]:
         (tuned.gross_outcomes, "single outcomes far off, not used"),
     ):
         if count:
-            lines.append(f"{count:,} {text}.")
+            lines.append(f"{count:,} {text if count > 1 else text.replace('outcomes', 'outcome')}.")
     return lines
 
 
@@ -184,7 +193,7 @@ def score_rows(proof: Proof, quantity: str) -> list[tuple[str, ...]]:
             row["method"],
             f"{row['heats']:,}",
             f"{row['mae']:.{digits}f} ± {row['mae_error']:.{digits}f}",
-            f"{row['bias']:+.{digits}f}".replace("-", "−"),
+            f"{round(row['bias'], digits) + 0.0:+.{digits}f}".replace("-", "−"),
             f"{row['hit_pct']:.1f} ± {row['hit_error_pct']:.1f}",
         )
         for row in scores[scores["quantity"] == quantity].to_dict("records")
@@ -218,6 +227,19 @@ def calibration_rows(calibration: pd.DataFrame) -> tuple[tuple[str, ...], list[t
         for stated in dict.fromkeys(calibration["stated"])
     ]
     return ("stated, %", *(words_of(name) for name in names)), rows
+
+
+def hit_rows(chances: pd.DataFrame) -> list[tuple[str, ...]]:
+    """Groups of heats of equal chance: quantity, chance stated, share that hit, heats."""
+    return [
+        (
+            words_of(row["quantity"]),
+            f"{100.0 * row['stated']:.1f}",
+            f"{100.0 * row['held']:.1f}",
+            f"{row['heats']:,}",
+        )
+        for row in chances.to_dict("records")
+    ]
 
 
 def calibration_text(calibration: pd.DataFrame) -> str:
