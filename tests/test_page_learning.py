@@ -8,6 +8,7 @@ jobs of one session only, nothing left behind).
 from __future__ import annotations
 
 import time
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -21,8 +22,11 @@ testing = pytest.importorskip("streamlit.testing.v1", reason="the page needs str
 
 from converter_calc.balance.documents import read_shop  # noqa: E402
 from converter_calc.basis.errors import InputError  # noqa: E402
+from converter_calc.learning.drift import Jump  # noqa: E402
+from converter_calc.learning.proof import Proof  # noqa: E402
 from converter_calc.learning.spread import spread  # noqa: E402
 from converter_calc.learning.spread_margin import margin  # noqa: E402
+from converter_calc.learning.today import drift_table  # noqa: E402
 from converter_calc.learning.tuned import load_tuned  # noqa: E402
 from converter_calc.learning.tuning import tune  # noqa: E402
 from converter_calc.page import jobs, learning_view, registers, sureness  # noqa: E402
@@ -32,8 +36,9 @@ from converter_calc.page.learning_results import json_of  # noqa: E402
 from converter_calc.page.learnt import restored, taken  # noqa: E402
 from converter_calc.page.session import solve, start_form  # noqa: E402
 from converter_calc.register.register import Register  # noqa: E402
-from converter_calc.reporting import spread_bands  # noqa: E402
+from converter_calc.reporting import learning_charts, learning_tables, spread_bands  # noqa: E402
 
+HEATS = 80
 ROOT = Path(__file__).resolve().parents[1]
 
 
@@ -59,7 +64,7 @@ def press(app: Any, key: str) -> Any:
 def test_spread_beside_the_recipe_is_that_of_the_command_line() -> None:
     app = opened()
     assert "All together" not in texts(app)  # shut: nothing is drawn
-    app = opened(sureness=True)
+    app = opened(sureness=True, spread_scatter=True)
     assert not app.exception
     outcome = solve(document_of(start_form()), predict=False).outcome
     found = spread(outcome, sureness.DRAWS, needs=False)
@@ -247,9 +252,9 @@ def shop() -> dict[str, Any]:
 
 @pytest.fixture(scope="module")
 def log() -> bytes:
-    """The first 150 heats of the demo log."""
+    """The first heats of the demo log."""
     lines = (DEMO / "heat_log.csv").read_bytes().splitlines(keepends=True)
-    return b"".join(lines[:151])
+    return b"".join(lines[: HEATS + 1])
 
 
 def finished(job: Job) -> dict[str, Any]:
@@ -352,7 +357,7 @@ def test_learning_on_the_page(learnt: dict[str, Any], log: bytes, shop: dict[str
     }  # fmt: skip
     app = opened(**state, **{"learning.part": "tuning"})
     assert not app.exception
-    assert f"{learnt['tuned'].heats:,} of 150 heats used" in texts(app)
+    assert f"{learnt['tuned'].heats:,} of {HEATS} heats used" in texts(app)
     (part,) = [x for x in app.radio if x.key == "learning.part"]
     app = part.set_value("drift").run()
     assert not app.exception
@@ -364,8 +369,7 @@ def test_learning_on_the_page(learnt: dict[str, Any], log: bytes, shop: dict[str
     app = show(app, "Plan a heat", sureness=True)
     assert "uncertainty of the parameters from the end of log.csv" in texts(app)
     app = show(app, "Learning")
-    print("PART", app.session_state["learning.part"], app.session_state["cc_views"], "cc_before_learnt" in app.session_state, [b.key for b in app.button])
-    app = press(app, "undo_take_today")
+    app = press(app, "undo_take_tuned")
     assert document_of(app.session_state["cc_form"]) == document_of(
         form_of(whole("ordinary_low_carbon"))
     )
@@ -389,3 +393,54 @@ def test_log_with_refused_rows_on_the_page() -> None:
     app = app.get("file_uploader")[0].set_value(("log.csv", b"nonsense,x\n1,2\n", "text/csv")).run()
     assert not app.exception
     assert "converter_calc_" not in texts(app)  # no folder of the server in a message
+
+
+def test_jump_stands_in_picture_and_table_with_its_date(learnt: dict[str, Any]) -> None:
+    followed, heats = learnt["followed"], learnt["heats"]
+    jump = Jump(70, "heat_loss_MJ_per_t", -14.2, 2.5, -5.7)
+    moved = replace(followed, drift=replace(followed.drift, jumps=(jump,)))
+    jumps = learning_tables.jump_table(moved, heats)
+    row = heats.iloc[70]
+    assert jumps.to_dict("records") == [
+        {"tapped_at": row["tapped_at"], "heat_id": row["heat_id"], "offset": "heat_loss_MJ_per_t",
+         "text": "−14.2 ± 2.5 MJ/t"}
+    ]  # fmt: skip
+    table = drift_table(heats, moved, moved.drift)
+    figure = learning_charts.drift_figure(table, jumps, "heat_loss_MJ_per_t", "heat loss")
+    assert [mark.text for mark in figure.layout.annotations] == ["−14.2 ± 2.5 MJ/t"]
+    text = learning_tables.drift_text(table, jumps, "heat_loss_MJ_per_t")
+    assert f"jumps: {row['tapped_at']:%Y-%m-%d} −14.2" in text
+
+
+@pytest.mark.parametrize(
+    ("x", "text"),
+    [(0.0, "0"), (7.4e-5, "0.000074"), (-0.00051, "−0.00051"), (12345.6, "12,346"),
+     (58.0, "58"), (np.nan, "–")],
+)  # fmt: skip
+def test_small_numbers_keep_their_digits(x: float, text: str) -> None:
+    assert learning_tables.plain(x) == text
+
+
+def test_proof_on_the_page_says_what_the_report_says() -> None:
+    """Scores of the view against those of the proof itself, for an invented proof."""
+    rng = np.random.default_rng(7)
+    n, names = 60, ("end_temp_C", "end_C_pct", "end_P_pct", "end_Mn_pct")
+    middle = np.array([1660.0, 0.04, 0.01, 0.12])
+    seen = middle * np.exp(0.01 * rng.standard_normal((n, 4)))
+    methods = ("untuned", "tuned", "with drift", "with residual", "linear regression")
+    predicted = {m: seen * np.exp(0.005 * rng.standard_normal((n, 4))) for m in methods}
+    sd = np.tile([8.3, 0.005, 0.005, 0.005], (n, 1))
+    times = [np.datetime64("2026-01-01T00:00") + np.timedelta64(k, "h") for k in range(n)]
+    proof = Proof(
+        np.arange(n), [f"h{k}" for k in range(n)], times, names, seen, predicted,
+        {"with drift": sd, "with residual": sd}, (0,), dict.fromkeys(names, 1.0),
+    )  # fmt: skip
+    read = registers.read_upload(LOG, "log.csv", {})
+    app = show(opened(cc_log=learning_view.Log("log.csv", read), cc_prove={"proof": proof}),
+               "Learning", **{"learning.part": "proof"})  # fmt: skip
+    assert not app.exception
+    error = np.abs(predicted["with drift"][:, 0] - seen[:, 0]).mean()
+    assert f"{error:.1f} ± " in texts(app)
+    charts = app.get("plotly_chart")
+    assert len(charts) == 4
+    assert all(chart.proto.alt for chart in charts)

@@ -6,10 +6,14 @@ property (what is typed reaches the heat file and the address and nothing else c
 
 from __future__ import annotations
 
+import itertools
 import json
 import math
+from pathlib import Path
 from typing import Any
 
+import numpy as np
+import pandas as pd
 import pytest
 
 import converter_calc
@@ -25,9 +29,19 @@ from converter_calc.metallurgy.lime_limits import lime_limits
 from converter_calc.metallurgy.marginal_cost import marginal_cost
 from converter_calc.metallurgy.practices import compare_practices
 from converter_calc.metallurgy.slag_product import slag_product
+from converter_calc.planning.ladle import ladle_of
+from converter_calc.planning.lime_sweeps import lime_curve, lime_lines
 from converter_calc.planning.outcome import at
 from converter_calc.planning.tap import tap
-from converter_calc.reporting.uploads import parse_table
+from converter_calc.reporting import tap_charts
+from converter_calc.reporting.phosphorus_charts import (
+    limits_figure,
+    measured_figure,
+    measured_text,
+    numbered,
+)
+from converter_calc.reporting.practice_charts import shares_figure
+from converter_calc.reporting.tap_charts import drawn_limits, steps_figure, steps_table
 from tests.conftest import DEMO
 from tests.demo import whole
 
@@ -58,6 +72,13 @@ def pictures(app: Any) -> list[Any]:
     found = app.get("plotly_chart")
     assert all(chart.proto.alt for chart in found)
     return list(found)
+
+
+def put_in(app: Any, document: dict[str, Any]) -> Any:
+    """A heat document in the fields of the page."""
+    app.session_state["cc_form"] = form_of(document)
+    app.session_state["cc_generation"] += 1
+    return app.run()
 
 
 # --- slag practice ---------------------------------------------------------------------------
@@ -144,9 +165,7 @@ def test_elements_show_shares_law_and_sources() -> None:
 
 def demo_tap(app: Any) -> Any:
     """The demo heat with a grade, in the fields of the page."""
-    app.session_state["cc_form"] = form_of(whole("structural_grade_to_ladle"))
-    app.session_state["cc_generation"] += 1
-    return app.run()
+    return put_in(app, whole("structural_grade_to_ladle"))
 
 
 def test_tap_shows_what_python_says() -> None:
@@ -272,9 +291,7 @@ def test_cost_of_low_phosphorus_is_that_of_python() -> None:
 
 def test_fluxes_by_least_cost_and_taken_into_the_plan() -> None:
     app = opened(view="lime", **{"lime.part": "fluxes"})
-    app.session_state["cc_form"] = form_of(whole("ordinary_low_carbon"))
-    app.session_state["cc_generation"] += 1
-    app.run()
+    put_in(app, whole("ordinary_low_carbon"))
     field(app, "Value of a tonne of steel, currency").set_value("420").run()
     press(app, "compare_fluxes")
     heats = heats_from_dict(heat(app))
@@ -300,15 +317,16 @@ def test_flux_number_out_of_range_is_named() -> None:
     assert not app.exception
 
 
-def test_log_ranks_the_laws_and_one_click_takes_one_over() -> None:
+def test_log_ranks_the_laws_and_one_click_takes_one_over(tmp_path: Path) -> None:
     app = opened(view="lime", **{"lime.part": "measured"})
     press(app, "rank_laws")
     assert "choose a file first" in texts(app)
     rows = (DEMO / "heat_log.csv").read_bytes().splitlines(keepends=True)[:301]
     app.get("file_uploader")[0].set_value(("log.csv", b"".join(rows), "text/csv")).run()
     press(app, "rank_laws")
-    log = read_log(parse_table(b"".join(rows), "log.csv"), materials=["ladle_skulls"]).frame
-    ranking = rank_laws(log)
+    path = tmp_path / "log.csv"
+    path.write_bytes(b"".join(rows))
+    ranking = rank_laws(read_log(path, materials=["ladle_skulls"]).frame)
     page = texts(app)
     for row in ranking.table.to_dict("records"):
         assert f"{row['approach']:,.3f}" in page
@@ -327,5 +345,107 @@ def test_foreign_log_is_told_in_sentences() -> None:
     content = b"heat_id,end_P_pct\n=1+1,![x](http://evil.invalid/p.png)\n"
     app.get("file_uploader")[0].set_value(("log.csv", content, "text/csv")).run()
     press(app, "rank_laws")
-    assert "The log was not taken" in texts(app)
+    page = texts(app)
+    assert "The log was not taken" in page
+    assert "slag_CaO_pct: no such column in the log" in page
+    assert "Refused rows" in page
+    assert "converter_calc_" not in page  # no folder of the server
     assert not app.exception
+
+
+def test_grade_out_of_reach_says_what_binds_and_what_frees() -> None:
+    document = whole("structural_grade_to_ladle")
+    limits = {"C": {"max": 0.06}, "P": {"max": 0.03}, "Mn": [0.9, 1.1]}
+    document["grades"] = {"tight": {"limits": limits}}
+    document["aim"]["grade"] = "tight"
+    document["tap"]["use"] = ["FeMn HC", "Al"]
+    app = put_in(opened(view="tap"), document)
+    page = texts(app)
+    assert "No additions reach tight" in page
+    assert "at most 0.06 % of tight" in page
+    assert "freed by" in page
+    ladle = ladle_of(converter_calc.plan(document))
+    marks = {el: ladle.mark(el, 0) for el in ladle.grade.limits}
+    assert "below" in marks.values() or "above" in marks.values()
+    signs = {"below": "▼ below", "above": "▲ above", "inside": "✓ inside"}
+    assert all(signs[mark] in page for mark in marks.values() if mark in signs)
+    assert not app.exception
+
+
+def test_practice_without_a_plan_stands_beside_those_that_have_one() -> None:
+    """A heat with no answer by one slag can still be made of pre-treated hot metal."""
+    app = opened(view="practice", aim_P_pct="0.004")
+    table = compare_practices(heat(app)).table().set_index("practice")
+    assert table.loc["one_slag", "status"] != "solved"
+    assert table.loc["pretreated", "status"] == "solved"
+    page = texts(app)
+    assert "One slag: no plan" in page
+    assert f"{table.loc['pretreated', 'lime_kg']:,.0f}" in page
+    assert len(pictures(app)) == 1
+
+
+def test_views_say_where_to_go_when_the_heat_is_wrong() -> None:
+    app = opened(view="tap", aim_P_pct="0.001")
+    assert "The heat has no answer as it stands; see Plan a heat" in texts(app)
+    app = opened(view="practice")
+    app.session_state["cc_form"].fields["hot_metal_kg"] = "many"
+    app.run()
+    assert "hot_metal.mass_kg: &#x27;many&#x27; is no number" in texts(app)
+    assert not app.get("plotly_chart")
+
+
+# --- pictures --------------------------------------------------------------------------------
+
+
+def test_temperature_steps_end_at_the_ladle() -> None:
+    """Closure: the steps add up to the ladle temperature, and the bars are those steps."""
+    told = tap(whole("structural_grade_to_ladle")).document()["tap"]
+    steps = steps_table(told)
+    assert steps["temp_C"].iloc[-2] == pytest.approx(told["temperature_C"], abs=1e-6)
+    (bars,) = steps_figure(steps).data
+    drawn = steps[steps["change_K"].isna() | (steps["change_K"].abs() >= 0.05)]
+    ends = [base + size for base, size in zip(bars.base, bars.x, strict=True)]
+    assert ends == pytest.approx(drawn["temp_C"].tolist())
+    assert bars.y[0] == "end of the blow"
+
+
+def test_place_in_the_range_of_the_grade() -> None:
+    row = {"element": "Mn", "pct": 1.25, "min_pct": 0.9, "max_pct": 1.6, "mark": "inside"}
+    over = {"element": "P", "pct": 0.03, "min_pct": None, "max_pct": 0.02, "mark": "above"}
+    open_side = {"element": "Al", "pct": 0.03, "min_pct": 0.015, "max_pct": None, "mark": "inside"}
+    assert drawn_limits([row, over, open_side]) == [row, over]
+    inside, outside = tap_charts.limits_figure([row, over]).data
+    assert (inside.name, list(inside.x)) == ("inside", [pytest.approx(50.0)])
+    assert (outside.name, list(outside.x)) == ("outside", [pytest.approx(150.0)])
+    assert inside.marker.symbol != outside.marker.symbol
+
+
+def test_shares_fill_the_bar() -> None:
+    """Closure: what is drawn of each element adds up to what was charged."""
+    frame = element_shares(converter_calc.plan(document_of(start_form()))).main().frame()
+    total = [0.0] * len(frame)
+    for bar in shares_figure(frame).data:
+        total = [a + b for a, b in zip(total, bar.x, strict=True)]
+    assert total == pytest.approx([100.0] * len(frame), rel=1e-9)
+
+
+def test_numbers_of_the_limits_do_not_overlap() -> None:
+    heats = heats_from_dict(document_of(start_form()))
+    limits = lime_limits(heats)
+    curve = lime_curve(heats, [3000.0, 6000.0, 13000.0], [])
+    figure = limits_figure(curve, lime_lines(heats, curve), limits)
+    boxes = [(n.x, n.yshift) for n in figure.layout.annotations if n.text.startswith("<b>")]
+    assert len(boxes) == len(numbered(limits))
+    rows = {shift: sorted(x for x, s in boxes if s == shift) for _, shift in boxes}
+    for places in rows.values():
+        assert all(b - a >= 0.035 * 10000.0 for a, b in itertools.pairwise(places))
+
+
+def test_a_wild_analysis_is_counted_and_does_not_squash_the_picture() -> None:
+    P = np.linspace(0.005, 0.02, 100)
+    tests = pd.DataFrame({"law": "a", "measured_P_pct": P, "calculated_P_pct": P})
+    tests.loc[3, "measured_P_pct"] = 0.22
+    figure = measured_figure(tests, "a")
+    assert figure.layout.xaxis.range[1] < 0.03
+    assert "1 beyond the picture" in figure.data[0].name
+    assert "1 of them beyond the picture" in measured_text(tests, "a")

@@ -42,13 +42,18 @@ SLOWEST = 1e-4
 
 @dataclass(frozen=True)
 class Jump:
-    """A step change: the first heat (row) that shows it, the offset, its size and error."""
+    """A step change: the first heat (row) that shows it, the offset, its size and error.
+
+    sure : it stands beside the wander that the likelihood asks for; otherwise it is suspected
+    only: a wander as fast as estimated could have gone so far.
+    """
 
     row: int
     offset: str
     size: float
     standard_error: float
     score: float
+    sure: bool = True
 
 
 @dataclass(frozen=True)
@@ -122,9 +127,11 @@ def find_jumps(
     """Jumps of the offsets, and the walk with them.
 
     A jump passes for a fast walk at first, so the search takes slower steps than the likelihood
-    asks for; what is found must then stand with the speeds estimated beside it.
+    asks for. What does not stand with the speeds estimated beside it is suspected only, and the
+    offset does not go free there.
     """
     places: list[tuple[int, int]] = []
+    suspected: list[Jump] = []
     while len(places) < MOST_JUMPS:
         slow = replace(walk, speed=walk.speed * SEARCH_SPEED)
         back = look_back(y, H, run_filter(y, H, slow))
@@ -132,11 +139,24 @@ def find_jumps(
         if found is None:
             break
         places.append(found)
+        suspected.append(replace(_jump(back, found, offsets), sure=False))
         walk = estimate_walk(y, H, _with_shock(walk, found, _size(back, found)), FEW_STEPS)
     walk, jumps = _settle(y, H, walk, places, offsets)
-    if len(jumps) < len(places):
-        walk = estimate_walk(y, H, walk, FEW_STEPS)
-    return walk, jumps
+    if len(jumps) == len(places):
+        return walk, jumps
+    left = [
+        jump
+        for jump in suspected
+        if not any(j.offset == jump.offset and abs(j.row - jump.row) <= NEAR for j in jumps)
+    ]
+    all_jumps = sorted([*jumps, *left], key=lambda jump: jump.row)
+    return estimate_walk(y, H, walk, FEW_STEPS), tuple(all_jumps)
+
+
+def _jump(back: Looked, place: tuple[int, int], offsets: tuple[str, ...]) -> Jump:
+    error = float(back.push_information[place] ** -0.5)
+    size = _size(back, place)
+    return Jump(place[0], offsets[place[1]], size, error, size / error)
 
 
 def estimate_walk(y: Array, H: Array, first: Walk, steps: int = MOST_STEPS) -> Walk:
@@ -267,8 +287,6 @@ def _settle(
             continue
         moved = (row, place[1])
         kept.append(moved)
-        size = _size(back, moved)
-        walk = _with_shock(walk, moved, size)
-        error = float(back.push_information[moved] ** -0.5)
-        jumps.append(Jump(row, offsets[moved[1]], size, error, float(score[moved])))
+        walk = _with_shock(walk, moved, _size(back, moved))
+        jumps.append(_jump(back, moved, offsets))
     return walk, tuple(sorted(jumps, key=lambda jump: jump.row))

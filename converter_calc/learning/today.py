@@ -60,14 +60,14 @@ class Today:
     tuned : parameters with today's offsets and their covariance. models : quantity -> what is
     left, used only where it won out of sample. scatter : quantity -> standard deviation of a
     heat about its prediction, transformed. as_of : time of the last heat of the log. jumps :
-    (time, heat_id, parameter, size, standard error) of the step changes found.
+    (time, heat_id, parameter, size, standard error, sure) of the step changes found.
     """
 
     tuned: Tuned
     models: Mapping[str, ResidualModel]
     scatter: Mapping[str, float]
     as_of: str
-    jumps: tuple[tuple[str, str, str, float, float], ...]
+    jumps: tuple[tuple[str, str, str, float, float, bool], ...]
 
     def left(self, outcome: Outcome) -> dict[str, Array]:
         """What heats like these have shown above the balance, (n,) each, transformed.
@@ -137,7 +137,14 @@ def learn(
     topped = top_up(followed, names, X)
     ids, times = frame["heat_id"].tolist(), frame["tapped_at"].astype(str).tolist()
     jumps = tuple(
-        (times[jump.row], str(ids[jump.row]), jump.offset, jump.size, jump.standard_error)
+        (
+            times[jump.row],
+            str(ids[jump.row]),
+            jump.offset,
+            jump.size,
+            jump.standard_error,
+            jump.sure,
+        )
         for jump in topped.drift.jumps
     )
     offset, cov = topped.drift.today
@@ -253,7 +260,8 @@ def today_from(document: Any, place: str = "offsets") -> Today:
             for name, entry in document["left"].items()
         }
         jumps = tuple(
-            (str(a), str(b), str(c), float(d), float(e)) for a, b, c, d, e in document["jumps"]
+            (str(a), str(b), str(c), float(d), float(e), bool(sure))
+            for a, b, c, d, e, sure in document["jumps"]
         )
         _ = [MOST[name] for name in (*models, *scatter)]
         as_of, tuned = str(document["as_of"]), document["tuned"]

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import sys
+import threading
 from pathlib import Path
 
 #: Server settings; the same stand in .streamlit/config.toml for `streamlit run app.py`.
@@ -57,6 +58,7 @@ def launch(port: int = 8501, register: Path | None = None) -> None:
     if register is not None:
         os.environ["CONVERTER_REGISTER"] = str(register.absolute())
     _warm_up()
+    threading.Thread(target=_warm_up_spread, daemon=True).start()
     sys.argv = arguments(port)
     sys.exit(cli.main())
 
@@ -69,3 +71,14 @@ def _warm_up() -> None:
 
     for _ in range(RECORDED_FROM_HEAT):
         session.solve(document_of(session.start_form()), predict=False)
+
+
+def _warm_up_spread() -> None:
+    """Load what the spread needs, while the server is up already."""
+    from converter_calc.learning.spread import spread
+    from converter_calc.page import session, sureness
+    from converter_calc.page.form import document_of
+
+    outcome = session.solve(document_of(session.start_form()), predict=False).outcome
+    if outcome is not None:
+        spread(outcome, sureness.DRAWS, needs=False)

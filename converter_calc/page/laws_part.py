@@ -11,13 +11,15 @@ import streamlit as st
 
 from converter_calc.balance.heats import HeatTable
 from converter_calc.balance.schema import parameters
-from converter_calc.basis.errors import InputError
+from converter_calc.basis.errors import Fault, InputError
 from converter_calc.heatlog.reading import read_log
 from converter_calc.laws import phosphorus
 from converter_calc.metallurgy.law_ranking import LawRanking, rank_laws
 from converter_calc.metallurgy.laws_compared import LawsCompared, compare_laws
+from converter_calc.page import registers
 from converter_calc.page.balance_view import show_figure
 from converter_calc.page.fields import WIDE_PX
+from converter_calc.page.log_parts import reading_choices, refused_shown
 from converter_calc.page.markup import fault_texts, heading, note, put, rows_of, table_html
 from converter_calc.page.numbers import number_text
 from converter_calc.page.parts import cell, save_tables, why
@@ -25,10 +27,9 @@ from converter_calc.page.session import Answer, form, kept, replace_form, theme,
 from converter_calc.planning.explain import Explanation, explain
 from converter_calc.reporting.phosphorus_charts import measured_figure, measured_text
 from converter_calc.reporting.phosphorus_tables import STILL_KG
-from converter_calc.reporting.uploads import parse_table
 
 #: Session: the ranking of the log that was read last, and what was asked to be planned.
-RANKING, ASKED = "cc_ranking", "cc_laws_asked"
+RANKING, REFUSED, ASKED = "cc_ranking", "cc_ranking_refused", "cc_laws_asked"
 FIGURES = ("phosphorus", "oxygen", "scrap")
 FAULTS_SHOWN = 20
 
@@ -152,12 +153,14 @@ def measured_part(found: Answer) -> None:
         "Give a heat log with end temperature, end phosphorus and slag analysis. Each law gets "
         "the approach factor that fits the heats, and is judged by heats it was not fitted to."
     )
-    file = st.file_uploader("Heat log (CSV or XLSX)", ["csv", "xlsx"], key="laws_log",
+    file = st.file_uploader("Heat log", ["csv", "parquet", "xlsx"], key="laws_log",
                             max_upload_size=5)  # fmt: skip
+    mark, skip = reading_choices("laws")
     if st.button("Rank the laws by this log", key="rank_laws"):
-        st.session_state.pop(RANKING, None)
+        for key in (RANKING, REFUSED):
+            st.session_state.pop(key, None)
         try:
-            st.session_state[RANKING] = _ranked(file, found.heats)
+            _rank(file, found.heats, mark, skip_unknown=skip)
         except InputError as error:
             lines = fault_texts(error.faults)
             more = len(lines) - FAULTS_SHOWN
@@ -166,25 +169,29 @@ def measured_part(found: Answer) -> None:
     ranking: LawRanking | None = st.session_state.get(RANKING)
     if ranking is not None:
         _ranking(ranking)
+    if REFUSED in st.session_state:
+        refused_shown(st.session_state[REFUSED], "laws")
 
 
-def _ranked(file: Any, heats: HeatTable) -> LawRanking:
-    """The ranking of an uploaded log. Raises InputError with every fault of the file."""
-    from converter_calc.basis.errors import Fault
-
+def _rank(file: Any, heats: HeatTable, mark: str, *, skip_unknown: bool) -> None:
+    """Keep the ranking of an uploaded log. Raises InputError with every fault of the file."""
     if file is None:
         raise InputError([Fault("log", "choose a file first")])
     bar = st.progress(0.1, "The log is read")
-    read = read_log(parse_table(file.getvalue(), file.name), materials=heats.materials,
-                    skip_unknown=True)  # fmt: skip
-    bar.progress(0.7, "The laws are fitted and tested")
-    ranking = rank_laws(read.frame)
+    try:
+        with registers.as_file(file.getvalue(), file.name) as path:
+            read = read_log(path, materials=heats.materials, decimal_mark=mark,
+                            skip_unknown=skip_unknown)  # fmt: skip
+        st.session_state[REFUSED] = read.refused
+        bar.progress(0.5, "The laws are fitted and tested")
+        ranking = rank_laws(read.frame)
+    finally:
+        bar.empty()
     if read.rows_refused:
         ranking.notes.append(f"{read.rows_refused} rows of the log were refused as faulty")
     if read.skipped:
-        ranking.notes.append(f"columns not of a heat log: {', '.join(read.skipped)[:300]}")
-    bar.empty()
-    return ranking
+        ranking.notes.append(f"columns left out: {', '.join(read.skipped)[:300]}")
+    st.session_state[RANKING] = ranking
 
 
 def _ranking(ranking: LawRanking) -> None:
@@ -220,9 +227,9 @@ def _take_over(ranking: LawRanking) -> None:
     names = [str(law) for law in ranking.table["law"] if str(law) in ranking.fits]
     if not names:
         return
-    usual = ranking.offered or names[0]
-    law = st.selectbox("Law to look at and to take over", names, index=names.index(usual),
-                       key="law_taken", width=WIDE_PX)  # fmt: skip
+    if st.session_state.get("law_taken") not in names:  # another log may rank other laws
+        st.session_state["law_taken"] = ranking.offered or names[0]
+    law = st.selectbox("Law to look at and to take over", names, key="law_taken", width=WIDE_PX)
     fit, row = ranking.fits[law], parameters()["P_approach"]
     if law in set(ranking.tests["law"]):
         figure = measured_figure(ranking.tests, law, theme())

@@ -141,7 +141,7 @@ def _take(tuned: Tuned, source: str) -> None:
     except InputError as error:
         _tell("fault", "They were not taken:", fault_texts(error.faults))
         return
-    st.session_state.setdefault("cc_before_learnt", before)
+    st.session_state["cc_before_learnt"] = before | st.session_state.get("cc_before_learnt", {})
     st.session_state["cc_learnt"] = learnt
     replace_form(new)
     write_address()

@@ -140,7 +140,10 @@ def _from_register() -> None:
 
 
 def _forget() -> None:
-    """Another log: what was learnt from the one before is no longer shown."""
+    """Another log: what was learnt from the one before is no longer shown, nor learnt on."""
+    job: Job | None = st.session_state.pop("cc_job", None)
+    if job is not None:
+        job.cancel()
     for key in ("cc_log", "cc_log_key", "cc_tune", "cc_prove"):
         st.session_state.pop(key, None)
 

@@ -23,7 +23,8 @@ if TYPE_CHECKING:
 XLSX = "application/vnd.openxmlformats-officedocument.spreadsheetml.sheet"
 CAUTION = "A calculation, not an instruction: the shop's own practice and its engineers decide."
 #: Units as they are shown.
-UNITS = {"Nm3": "Nm³", "C": "°C", "mass %": "%", "kg/t steel": "kg/t", "currency/t steel": "/t"}
+UNITS = {"Nm3": "Nm³", "C": "°C", "mass %": "%", "kg/t steel": "kg/t",
+         "currency/t steel": "currency/t"}  # fmt: skip
 
 
 def part_of(view: str, parts: Mapping[str, str]) -> str:

@@ -54,7 +54,7 @@ FIRST = ("slag_off_share_pct", "slag_off_temp_C", "slag_off_C_pct", "kept_slag_s
 SECTIONS = ("slag_off", "kept_slag", "pretreated")
 #: What of a stage can be asked about.
 ASKED = ("lime", "scrap", "oxygen", "magnesia", "phosphorus", "carbon", "temperature")
-INPUT_PX = 150
+INPUT_PX = 165
 STAGE_COLUMNS = (
     ("temp_C", "°C", 1), ("C_pct", "[C], %", 3), ("P_pct", "[P], %", 4), ("Mn_pct", "[Mn], %", 3),
     ("lime_kg", "lime, kg", 0), ("scrap_kg", "scrap, kg", 0), ("oxygen_Nm3", "oxygen, Nm³", 0),

@@ -53,7 +53,7 @@ class Answer:
 
 ANSWERS: Store[Answer] = Store(most=64)
 #: Curves, maps and figures of the views.
-PICTURES: Store[Any] = Store(most=48)
+PICTURES: Store[Any] = Store(most=128)
 
 
 @cache

@@ -66,13 +66,21 @@ def _sureness() -> None:
             put("The plan has no answer as it stands, so there is nothing to be sure of.")
             return
         extra = _learnt_extra()
-        scatter = kept("spread", found, (DRAWS, _key(extra)),
-                       lambda: spread(found.outcome, DRAWS, needs=False, extra=extra))  # fmt: skip
-        _shown(scatter, learnt=extra is not None)
+        _shown(_spread(found, extra, shares=False), learnt=extra is not None)
         if form().question != "predict":
-            _margin(found, scatter, extra)
-        _scatter(scatter)
+            _margin(found, extra)
+        _scatter(found, extra)
         _errors()
+
+
+def _spread(found: Answer, extra: Any, *, shares: bool) -> Spread:
+    """The spread of the plan; what makes it costs as much again, so only where it is shown."""
+
+    def make() -> Spread:
+        return spread(found.outcome, DRAWS, needs=False, extra=extra, shares=shares)
+
+    scatter: Spread = kept("spread", found, (shares, _key(extra)), make)
+    return scatter
 
 
 def _learnt_extra() -> Any:
@@ -93,27 +101,38 @@ def _shown(scatter: Spread, *, learnt: bool) -> None:
     if learnt:
         source = st.session_state["cc_learnt"].source
         put(f"The uncertainty of the parameters from {source} is in it.")
-    missed = [f"{scatter.unsolved} draws have no end point and count as missed."]
     if scatter.unsolved:
-        put(note("note", "", missed))
+        put(note("note", f"{scatter.unsolved} draws have no end point and count as missed."))
+    put(note("note", " ".join(CAUTION)))
 
 
-def _scatter(scatter: Spread) -> None:
-    headings, rows = bands.scatter_rows(scatter)
-    if rows:
-        put(
-            heading("What makes the scatter"),
-            "Share of the variance, %; what is correlated stands in one row.",
-            table_html("what makes the scatter", headings, rows),
-        )
-    rows = bands.worth_rows(scatter)
-    if rows:
-        put(
-            heading("What a better measurement is worth"),
-            "Gain in the chance of all together, percentage points.",
-            table_html("worth of better measurements",
-                       ("error of", "now, sd", "halved", "gone"), rows),
-        )  # fmt: skip
+def _scatter(found: Answer, extra: Any) -> None:
+    """What makes the scatter, and all numbers; worked out once opened."""
+    title = "What makes the scatter, and what a better measurement is worth"
+    opened = st.expander(title, key="spread_scatter", on_change="rerun")
+    if not opened.open:
+        return
+    with opened:
+        scatter = _spread(found, extra, shares=True)
+        headings, rows = bands.scatter_rows(scatter)
+        if rows:
+            put(
+                heading("What makes the scatter"),
+                "Share of the variance; what is correlated stands in one row.",
+                table_html("what makes the scatter", headings, rows),
+            )
+        rows = bands.worth_rows(scatter)
+        if rows:
+            put(
+                heading("What a better measurement is worth"),
+                "Gain in the chance of all together, percentage points.",
+                table_html("worth of better measurements",
+                           ("error of", "now, sd", "halved", "gone"), rows),
+            )  # fmt: skip
+        _numbers(scatter)
+
+
+def _numbers(scatter: Spread) -> None:
     named = ("end point", "as read", "5 %", "25 %", "50 %", "75 %", "95 %")
     put(
         heading("Numbers"),
@@ -121,11 +140,10 @@ def _scatter(scatter: Spread) -> None:
                    bands.chance_rows(scatter), numeric=2),
         table_html("end point", named, bands.distribution_rows(scatter.results.values()),
                    wide=True),
-        note("note", "", [" ".join(CAUTION)]),
     )  # fmt: skip
 
 
-def _margin(found: Answer, scatter: Spread, extra: Any) -> None:
+def _margin(found: Answer, extra: Any) -> None:
     put(heading("The margin to plan with"))
     text = view_field("spread", "probability", "Wanted chance of each window, %",
                       placeholder="90", width=250)  # fmt: skip
@@ -144,10 +162,14 @@ def _margin(found: Answer, scatter: Spread, extra: Any) -> None:
     if st.session_state.get("cc_margin_for") == key:
         with st.spinner("Plans with other aims are drawn"):
             moved = kept("margin", found, (wanted, MARGIN_DRAWS, _key(extra)),
-                         lambda: margin(scatter, wanted, MARGIN_DRAWS, extra))  # fmt: skip
+                         lambda: _margin_of(found, wanted, extra))  # fmt: skip
         _margin_shown(moved)
     if "cc_before_margin" in st.session_state:
         st.button("Put the aims back as they were", key="undo_margin", on_click=_undo)
+
+
+def _margin_of(found: Answer, wanted: float, extra: Any) -> Margin:
+    return margin(_spread(found, extra, shares=True), wanted, MARGIN_DRAWS, extra)
 
 
 def _margin_shown(moved: Margin) -> None:

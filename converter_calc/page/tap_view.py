@@ -144,11 +144,8 @@ def _verdict(result: TapResult, tap: dict[str, Any]) -> None:
     cost = tap["additions_cost_per_t"]
     if cost is not None:
         rows.append(("priced additions, shop currency", f"{cost:,.2f} /t", ""))
-    put(
-        table_html(
-            "in the ladle", ("in the ladle", "value", "remark"), rows, numeric={1}, large=True
-        )
-    )
+    heads = ("in the ladle", "value", "remark")
+    put(table_html("in the ladle", heads, rows, numeric={1}, large=True))
     warnings = [f"{w['message']} [{w['field']}]" for w in tap["warnings"]]
     if warnings:
         put(note("note", "Warnings", warnings))

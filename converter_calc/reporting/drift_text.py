@@ -11,6 +11,7 @@ if TYPE_CHECKING:
     from converter_calc.learning.today import Today
 
 WIDTH = 96
+SUSPECTED = " (suspected: a wander could have gone so far)"
 
 
 def drift_text(today: Today, followed: Followed, topped: Topped) -> str:
@@ -37,11 +38,11 @@ def drift_text(today: Today, followed: Followed, topped: Topped) -> str:
     ]
     lines += ["", "a step: how far it wanders from one heat to the next, one deviation.", ""]
     lines.append("Step changes found" if today.jumps else "No step change found.")
-    for time, heat_id, name, size, deviation in today.jumps:
+    for time, heat_id, name, size, deviation, sure in today.jumps:
         share = name.endswith("_approach")
         told = f"{100 * size:+.0f} ± {100 * deviation:.0f} %" if share else (
             f"{size:+.3g} ± {deviation:.2g} {unit[name]}")  # fmt: skip
-        lines.append(f"  {time}  before heat {heat_id}: {name} {told}")
+        lines.append(f"  {time}  before heat {heat_id}: {name} {told}{'' if sure else SUSPECTED}")
     lines += ["", f"{'quantity':<16}{'scatter of a heat':>22}{'what is left':>34}", "-" * WIDTH]
     for name, scatter in today.scatter.items():
         model = today.models.get(name)

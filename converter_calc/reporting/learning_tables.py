@@ -81,7 +81,7 @@ def parameter_rows(tuned: Tuned) -> list[tuple[str, ...]]:
 
 def _note(entry: TunedParameter) -> str:
     if entry.held:
-        return "the log cannot tell it; stays as before"
+        return "not told, as before"
     return "at its bound" if entry.at_bound else ""
 
 

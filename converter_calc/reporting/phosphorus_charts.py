@@ -161,11 +161,12 @@ def measured_figure(
 
     text, _ = themed(theme)
     part = tests[tests["law"] == law]
-    most = 1.05 * float(part[["measured_P_pct", "calculated_P_pct"]].to_numpy().max(initial=0.005))
+    most, beyond = _reach(part)
+    more = f" ({beyond} beyond the picture)" if beyond else ""
     figure = go.Figure(layout=layout(theme, 420, width, legend=True))
     figure.add_scatter(
         x=part["measured_P_pct"], y=part["calculated_P_pct"], mode="markers",
-        name=f"heats, {law}", marker={"size": 6, "color": PALETTE["blue"], "opacity": 0.75},
+        name=f"heats, {law}{more}", marker={"size": 6, "color": PALETTE["blue"], "opacity": 0.75},
         hovertemplate="measured %{x:.4f} %<br>calculated %{y:.4f} %<extra></extra>",
     )  # fmt: skip
     figure.add_scatter(
@@ -179,11 +180,18 @@ def measured_figure(
     return figure
 
 
+def _reach(part: pd.DataFrame) -> tuple[float, int]:
+    """End of both axes [mass %], so that one wild analysis hides no other; heats beyond it."""
+    both = part[["measured_P_pct", "calculated_P_pct"]].to_numpy(float)
+    most = 1.4 * float(np.quantile(both, 0.98)) if both.size else 0.01
+    return most, int((both.max(axis=1, initial=0.0) > most).sum())
+
+
 def measured_text(tests: pd.DataFrame, law: str) -> str:
     """Measured against calculated phosphorus in one sentence."""
     part = tests[tests["law"] == law]
     error: Any = (part["calculated_P_pct"] - part["measured_P_pct"]).abs().mean()
     return (
         f"Calculated against measured end phosphorus of {len(part)} heats by {law}: mean absolute "
-        f"error {float(error):.5f} %."
+        f"error {float(error):.5f} %; {_reach(part)[1]} of them beyond the picture."
     )
