@@ -128,18 +128,6 @@ def test_what_is_left_makes_the_scatter_smaller() -> None:
     np.testing.assert_allclose(again.expected[:200], topped.expected[:200], rtol=1e-9, atol=1e-12)
 
 
-def test_the_planted_step_of_the_demo_log_is_dated() -> None:
-    """The generator sets its hot-metal thermometer right at 06:00 on 2026-01-19."""
-    frame = in_time_order(read_log(DEMO / "heat_log.csv", SHOP).frame).head(420)
-    found = learn(frame, SHOP, tuned=tuned())[0].jumps
-    hours = [
-        (pd.Timestamp(time) - pd.Timestamp("2026-01-19 06:00")).total_seconds() / 3600.0
-        for time, _, name, size, _, _ in found
-        if name == "heat_loss_MJ_per_t" and size < 0.0
-    ]
-    assert any(-1.0 <= late <= 12.0 for late in hours)
-
-
 def test_without_anything_left_the_plan_is_that_of_the_tuned_shop() -> None:
     """Identity."""
     bare = Today(tuned(), {"end_temp_C": plain_model(5.0, used=False)}, {}, "", ())
