@@ -375,3 +375,86 @@ def test_a_heat_without_any_silicon_predicts_quietly(tmp_path: Path) -> None:
     assert result.exit_code == 0
     assert json.loads(result.stdout)["end_point"]["basicity"] is None
     assert run("predict", file).exit_code == 0
+
+
+# --- files to write, and comparisons without an answer ---------------------------------------
+
+
+@pytest.mark.parametrize("words", [
+    ("replay", "LOG", "--shop", DEMO / "shop.toml", "--out", "LOG"),
+    ("tune", "LOG", "--shop", DEMO / "shop.toml", "--json", "LOG"),
+    ("log", "import", "LOG", "--refused", "LOG"),
+])  # fmt: skip
+def test_what_is_read_is_never_written_over(words: tuple[Any, ...], tmp_path: Path) -> None:
+    log = tmp_path / "log.csv"
+    lines = (DEMO / "heat_log.csv").read_text(encoding="utf-8").splitlines()[:3]
+    log.write_text("\n".join(lines), encoding="utf-8")
+    before = log.read_bytes()
+    extra = ("--register", tmp_path / "r.sqlite") if words[0] == "log" else ()
+    result = run(*(log if word == "LOG" else word for word in words), *extra)
+    assert_wrong_input(result, [words[-2]])
+    assert "is read by this command" in result.stderr
+    assert log.read_bytes() == before
+    assert [file.name for file in tmp_path.iterdir()] == ["log.csv"]
+
+
+def test_two_outputs_do_not_share_a_file(tmp_path: Path) -> None:
+    log, out = DEMO / "heat_log.csv", tmp_path / "x"
+    result = run("replay", log, "--shop", DEMO / "shop.toml", "--out", out, "--json", out)
+    assert_wrong_input(result, ["--out"])
+    assert not out.exists()
+
+
+@pytest.mark.parametrize("target", [".", "no/x.parquet", "x" * 300])
+def test_a_bad_target_is_told_before_the_work(target: str, tmp_path: Path) -> None:
+    where = tmp_path / target
+    shop = DEMO / "shop.toml"
+    result = run("replay", DEMO / "heat_log.csv", "--shop", shop, "--out", where)
+    assert_wrong_input(result, ["--out"])
+    assert list(tmp_path.iterdir()) == []
+
+
+def test_nothing_is_recorded_where_the_result_cannot_be_written(tmp_path: Path) -> None:
+    register = tmp_path / "r.sqlite"
+    words = ("record", ORDINARY, "--register", register, "--json", tmp_path / "no" / "x.json")
+    assert_wrong_input(run(*words), ["--json"])
+    assert not register.exists()
+
+
+def test_backup_to_a_folder_that_is_none_names_the_target(tmp_path: Path) -> None:
+    register = tmp_path / "r.sqlite"
+    assert run("record", ORDINARY, "--register", register).exit_code == 0
+    for target in (tmp_path / "no" / "b.sqlite", tmp_path):
+        result = run("log", "backup", target, "--register", register)
+        assert_wrong_input(result, [str(target)])
+
+
+def test_a_blank_value_is_not_an_actual(tmp_path: Path) -> None:
+    register = tmp_path / "r.sqlite"
+    result = run("actual", "7", "--end-C-pct", " ", "--register", register)
+    assert_wrong_input(result, ["end_C_pct"])
+    assert not register.exists()
+
+
+def test_a_practice_named_twice_is_compared_once() -> None:
+    twice = run("practices", ORDINARY, "--of", "one_slag,one_slag", "--json", "-")
+    once = run("practices", ORDINARY, "--of", "one_slag", "--json", "-")
+    assert (twice.exit_code, twice.stdout) == (0, once.stdout)
+
+
+@pytest.mark.parametrize("value", ["nan", "-5", "0", "1e300"])
+def test_a_value_of_steel_that_is_none(value: str) -> None:
+    assert_wrong_input(run("fluxes", ORDINARY, "--steel-value", value), ["steel_value_per_t"])
+
+
+@pytest.mark.parametrize("command", ["phosphorus", "practices", "lime"])
+def test_comparisons_without_an_answer_are_3_and_say_why(command: str, tmp_path: Path) -> None:
+    file = tmp_path / "cold.toml"
+    cold = GOOD.replace("1340", "1150").replace("1650", "1750").replace("4.4", "3.4")
+    if command == "lime":  # a kilogram of hot metal under the heat loss of a whole vessel
+        cold = re.sub(r"mass_kg = \S+", "mass_kg = 1", cold)
+    file.write_text(cold, encoding="utf-8")
+    result = run(command, file)
+    assert result.exit_code == 3
+    assert re.search("what binds is|gives this heat an end point", result.stderr)
+    assert "Traceback" not in result.stderr

@@ -13,6 +13,7 @@ from pathlib import Path
 from typing import Any
 
 import numpy as np
+import pandas as pd
 import pytest
 
 from tests.conftest import DEMO
@@ -398,14 +399,14 @@ def test_log_with_refused_rows_on_the_page() -> None:
 def test_jump_stands_in_picture_and_table_with_its_date(learnt: dict[str, Any]) -> None:
     followed, heats = learnt["followed"], learnt["heats"]
     jump = Jump(70, "heat_loss_MJ_per_t", -14.2, 2.5, -5.7)
-    moved = replace(followed, drift=replace(followed.drift, jumps=(jump,)))
-    jumps = learning_tables.jump_table(moved, heats)
+    moved = replace(followed.drift, jumps=(jump,))
+    jumps = learning_tables.jump_table(followed.tuned, moved, heats)
     row = heats.iloc[70]
     assert jumps.to_dict("records") == [
         {"tapped_at": row["tapped_at"], "heat_id": row["heat_id"], "offset": "heat_loss_MJ_per_t",
          "text": "−14.2 ± 2.5 MJ/t"}
     ]  # fmt: skip
-    table = drift_table(heats, moved, moved.drift)
+    table = drift_table(heats, followed, moved)
     figure = learning_charts.drift_figure(table, jumps, "heat_loss_MJ_per_t", "heat loss")
     assert [mark.text for mark in figure.layout.annotations] == ["−14.2 ± 2.5 MJ/t"]
     text = learning_tables.drift_text(table, jumps, "heat_loss_MJ_per_t")
@@ -444,3 +445,14 @@ def test_proof_on_the_page_says_what_the_report_says() -> None:
     charts = app.get("plotly_chart")
     assert len(charts) == 4
     assert all(chart.proto.alt for chart in charts)
+
+
+def test_no_line_spans_a_pause_of_the_log() -> None:
+    times = np.datetime64("2026-01-01") + np.r_[0:40, 400:440].astype("timedelta64[h]")
+    heats = pd.DataFrame(
+        {"tapped_at": times, "quantity": "end_temp_C", "method": "tuned", "observed": 1650.0,
+         "predicted": 1652.0}
+    )  # fmt: skip
+    (line,) = learning_charts.misses_figure(heats, "end_temp_C", ["tuned"]).data
+    assert np.flatnonzero(np.isnan(line.y)).tolist() == [40]
+    assert np.nanmax(line.y) == np.nanmin(line.y) == 2.0

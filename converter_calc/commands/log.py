@@ -103,6 +103,10 @@ def actual(
         if not sign or not name.strip():
             raise InputError([Fault("--set", f"must be NAME=VALUE, given {pair[:60]!r}")])
         typed[name.strip()] = value
+    blank = [Fault(name, "no value given; --clear takes back a recorded one")
+             for name, value in typed.items() if not value.strip()]  # fmt: skip
+    if blank:
+        raise InputError(blank)
     with _open(register, create=True) as book:
         values: dict[str, Any] = {}
         if source is not None:

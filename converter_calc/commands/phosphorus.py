@@ -65,13 +65,22 @@ def phosphorus(
     if cost is not None:
         table = marginal_table(heats)
         document |= {"marginal": plain(vars(cost)), "marginal_table": records(table)}
-    if write_json(document, json_to):
+    if not write_json(document, json_to):
+        if ranking is not None:
+            click.echo(text.ranking_text(ranking))
+        click.echo(text.laws_compared_text(compared))
+        if cost is not None:
+            click.echo(text.marginal_text(cost, table), nl=False)
+    _exit_without_plan(compared.table)
+
+
+def _exit_without_plan(table: Any) -> None:
+    """Exit code 3, and what binds, where no law has a plan."""
+    if (table["status"] == "solved").any():
         return
-    if ranking is not None:
-        click.echo(text.ranking_text(ranking))
-    click.echo(text.laws_compared_text(compared))
-    if cost is not None:
-        click.echo(text.marginal_text(cost, table), nl=False)
+    for binding in dict.fromkeys(table["binding"]):
+        click.echo(f"no charge reaches the aim under any law; what binds is {binding}", err=True)
+    sys.exit(NO_ANSWER)
 
 
 def _marginal_or_none(marginal_cost: Callable[[HeatTable], Any], heats: HeatTable) -> Any:
@@ -206,8 +215,14 @@ def practices(heat: Path, names: str | None, json_to: str | None) -> None:
     compared = compare_practices(heat, wanted)
     if not write_json(compared.document(), json_to):
         click.echo(practices_text(compared), nl=False)
-    if not any(chain.status[0] == "solved" for ((_, chain),) in compared.chains.values()):
-        sys.exit(NO_ANSWER)
+    chains = {name: chain for name, ((_, chain),) in compared.chains.items()}
+    if any(chain.status[0] == "solved" for chain in chains.values()):
+        return
+    for name, chain in chains.items():
+        click.echo(f"{name}: {chain.status[0]}; what binds is {chain.binding[0]}", err=True)
+        for free in chain.frees[0]:
+            click.echo(f"  it would be freed by: {free}", err=True)
+    sys.exit(NO_ANSWER)
 
 
 def _solved(heat: Path, *, as_predict: bool) -> Any:

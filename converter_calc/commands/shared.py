@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import os
 import sys
 from collections.abc import Callable
 from functools import wraps
@@ -13,7 +14,9 @@ import click
 
 from converter_calc.basis.errors import (
     ConverterError,
+    Fault,
     InfeasibleError,
+    InputError,
 )
 
 WRONG_INPUT = 2
@@ -36,12 +39,20 @@ JSON = click.option(
 )
 
 
+#: Parameters of the commands that name a file to write, and their option.
+_WRITTEN = {
+    "json_to": "--json", "out": "--out", "html": "--html",
+    "refused": "--refused", "refused_to": "--refused",
+}  # fmt: skip
+
+
 def guarded(command: Callable[..., None]) -> Callable[..., None]:
     """Turn every error of ours into lines on standard error and an exit code."""
 
     @wraps(command)
     def run(*args: Any, **kwargs: Any) -> None:
         try:
+            _check_written(kwargs)
             command(*args, **kwargs)
         except InfeasibleError as error:
             _tell_infeasible(error)
@@ -53,6 +64,32 @@ def guarded(command: Callable[..., None]) -> Callable[..., None]:
             sys.exit(NO_ANSWER if isinstance(error, ConvergenceError) else WRONG_INPUT)
 
     return run
+
+
+def _check_written(given: dict[str, Any]) -> None:
+    """Refuse, before any work is done, a file that cannot be written or that is read as well."""
+    taken = {Path(x).resolve(): "is read by this command" for name, x in given.items()
+             if isinstance(x, Path) and name not in _WRITTEN}  # fmt: skip
+    for name, option in _WRITTEN.items():
+        if given.get(name) in (None, "-"):
+            continue
+        path = Path(given[name])
+        try:
+            where = path.resolve()
+            if where.is_dir():
+                reason = "Is a directory"
+            elif not where.parent.is_dir():
+                reason = "No such file or directory"
+            elif where in taken:
+                reason = f"it {taken[where]}"
+            elif not os.access(where if where.exists() else where.parent, os.W_OK):
+                reason = "Permission denied"
+            else:
+                taken[where] = f"is written by {option} already"
+                continue
+        except (OSError, ValueError) as error:  # a name too long, or with a null byte
+            reason = getattr(error, "strerror", None) or str(error)
+        raise InputError([Fault(option, f"cannot write {path}: {reason}")])
 
 
 def with_tuned(heat: Path, tuned: Path | None) -> Any:
@@ -102,6 +139,4 @@ def write_text(path: Path, text: str, option: str) -> None:
     try:
         path.write_text(text, encoding="utf-8")
     except OSError as error:
-        from converter_calc.basis.errors import Fault, InputError
-
         raise InputError([Fault(option, f"cannot write {path}: {error.strerror}")]) from error

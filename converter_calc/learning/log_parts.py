@@ -92,8 +92,8 @@ def replaced(path: str | Path) -> Iterator[Path]:
     Raises InputError where it cannot be written.
     """
     path = Path(path)
-    part = path.with_name(f".{path.name}.{os.getpid()}.part")
     try:
+        part = path.with_name(f".{path.name}.{os.getpid()}.part")
         try:
             yield part
             part.replace(path)

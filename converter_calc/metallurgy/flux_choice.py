@@ -31,6 +31,8 @@ from converter_calc.planning.plan import plan_heats
 from converter_calc.planning.sweeps import gas_CO2_kg, materials_CO2_kg, only_one
 
 CANDIDATES = (*LIME_CARRIERS, *MAGNESIA_CARRIERS, "fluorspar", "recycled_slag")
+#: Most value of a tonne of steel taken, in any currency; what is above is a slip.
+MOST_STEEL_VALUE = 1e9
 
 
 @dataclass(frozen=True)
@@ -111,8 +113,9 @@ def choose_fluxes(
 
     Raises
     ------
-    InputError : not one heat, an unknown material, no price of hot metal, oxygen or scrap, or
-    none of any candidate. InfeasibleError : no mix of these reaches the aims.
+    InputError : not one heat, a limit or value out of range, an unknown material, no price of
+    hot metal, oxygen or scrap, or none of any candidate. InfeasibleError : no mix of these
+    reaches the aims.
     ConvergenceError : the search did not end.
     """
     only_one(heats)
@@ -120,7 +123,7 @@ def choose_fluxes(
     base = fluxes_free(heats, {})
     wanted = list(dict.fromkeys(CANDIDATES if candidates is None else candidates))
     check_materials(base, [*wanted, *limits.most_kg])
-    _check_limits(limits)
+    _check_limits(limits, steel_value_per_t)
     priced = [name for name in wanted if base.materials[name].price_per_t is not None]
     _check_prices(base, priced)
     search = FluxSearch(base, priced, limits, steel_value_per_t)
@@ -129,7 +132,7 @@ def choose_fluxes(
     return _choice(search, z, wanted, beside)
 
 
-def _check_limits(limits: FluxLimits) -> None:
+def _check_limits(limits: FluxLimits, steel_value_per_t: float | None) -> None:
     numbers = {
         "fluorspar_kg_per_t": limits.fluorspar_kg_per_t,
         "recycled_P_kg_per_t": limits.recycled_P_kg_per_t,
@@ -137,6 +140,9 @@ def _check_limits(limits: FluxLimits) -> None:
     }
     faults = [Fault(name, f"must be 0 or more, given {x:g}")
               for name, x in numbers.items() if not x >= 0.0]  # fmt: skip
+    if steel_value_per_t is not None and not 0.0 < steel_value_per_t <= MOST_STEEL_VALUE:
+        message = f"must be above 0, at most {MOST_STEEL_VALUE:g}, given {steel_value_per_t:g}"
+        faults.append(Fault("steel_value_per_t", message))
     if faults:
         raise InputError(faults)
 

@@ -15,7 +15,7 @@ import numpy as np
 from converter_calc.balance.heats import HeatTable
 from converter_calc.balance.schema import parameters
 from converter_calc.basis.dual import Array
-from converter_calc.basis.errors import Fault, InputError
+from converter_calc.basis.errors import InfeasibleError
 from converter_calc.laws import phosphorus, saturation
 from converter_calc.planning.explain import Term, source_of
 from converter_calc.planning.lime_sweeps import (
@@ -100,15 +100,16 @@ def lime_limits(heats: HeatTable, lime_kg: Any = None) -> LimeLimits:
 
     Raises
     ------
-    InputError : not one heat, lime negative or not finite, input missing.
+    InputError : not one heat, lime negative or not finite, input missing. InfeasibleError : no
+    lime gives the heat an end point.
     """
     only_one(heats)
     base = phosphorus_free(heats)
     lines = lime_lines(base)
     reach = np.nanmax([lines.dissolution_stops_kg, lines.least_basicity_kg, 0.0])
     if not reach > 0.0:
-        message = "no lime gives this heat an end point; see what its plan says"
-        raise InputError([Fault(f"charge.{base.choices.lime}_kg", message)])
+        message = f"no mass of {base.choices.lime} gives this heat an end point"
+        raise InfeasibleError(message, frees=["what the plan of this heat names"])
     points = (
         np.linspace(0.0, 1.4 * reach, POINTS) if lime_kg is None else np.sort(np.ravel(lime_kg))
     )

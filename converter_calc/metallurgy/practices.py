@@ -66,7 +66,7 @@ def compare_practices(heat: Any, practices: Iterable[str] | None = None) -> Comp
     InputError : wrong input, an unknown practice, a slag-off carbon not between hot metal and
     aim. A practice that no charge can make is told in its status, nothing is raised.
     """
-    names = list(PRACTICES) if practices is None else list(practices)
+    names = list(dict.fromkeys(PRACTICES if practices is None else practices))
     for name in names:
         if name not in PRACTICES:
             allowed = ", ".join(PRACTICES)

@@ -33,8 +33,9 @@ Told = Callable[[float, str], None]
 def tune_and_follow(frame: pd.DataFrame, shop: dict[str, Any], tell: Told) -> dict[str, Any]:
     """Tuned parameters of a log, and how their offsets wandered through it.
 
-    Returns tuned (Tuned), today (Today), followed (Followed) and heats: heat_id and tapped_at in
-    time order. tell : is told the share done (0..1) and what is done now.
+    Returns tuned (Tuned), today (Today), followed (Followed), drift (Drift beside what is left),
+    and heats: heat_id and tapped_at in time order. tell : is told the share done (0..1) and what
+    is done now.
     """
     from converter_calc.learning.today import in_time_order, learn
     from converter_calc.learning.tuning import tune
@@ -47,20 +48,23 @@ def tune_and_follow(frame: pd.DataFrame, shop: dict[str, Any], tell: Told) -> di
     tell(0.0, f"the log of {len(frame):,} heats is made ready")
     tuned: Tuned = tune(frame, shop, progress=count)
     tell(TUNED_SHARE, "offsets are followed through the log")
-    today, followed, _ = learn(frame, shop, tuned=tuned)
-    heats = frame[["heat_id", "tapped_at"]]
-    return {"tuned": tuned, "today": today, "followed": followed, "heats": heats}
+    today, followed, topped = learn(frame, shop, tuned=tuned)
+    return {
+        "tuned": tuned, "today": today, "followed": followed, "drift": topped.drift,
+        "heats": frame[["heat_id", "tapped_at"]],
+    }  # fmt: skip
 
 
 def prove(frame: pd.DataFrame, shop: dict[str, Any], tell: Told) -> dict[str, Any]:
     """Proof out of sample of a log; returns proof (Proof)."""
     from converter_calc.learning.proof import walk_forward
+    from converter_calc.learning.rivals import rivals
 
     def count(done: int, of: int) -> None:
         tell(done / of, f"stage {done} of {of} is done")
 
     tell(0.0, "the first stage is tuned; later ones are quicker")
-    return {"proof": walk_forward(frame, shop, progress=count)}
+    return {"proof": walk_forward(frame, shop, competitors=rivals(), progress=count)}
 
 
 KINDS: dict[str, Callable[[Any, dict[str, Any], Told], dict[str, Any]]] = {

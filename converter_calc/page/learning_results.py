@@ -174,14 +174,17 @@ def drift(found: dict[str, Any], source: str) -> None:
     _take_button(followed.today(), f"the end of {source}", "Take today's offsets into the plan",
                  "take_today")  # fmt: skip
     today: Today = found["today"]
+    left = tables.left_text(today)
+    if left:
+        put(note("note", left))
     st.download_button("Offsets of the day (JSON)", json_of(today), "today.json",
                        "application/json", key="today_json", on_click="ignore")  # fmt: skip
     put(heading("How it wandered"))
     names = list(followed.drift.offsets)
     offset = st.selectbox("Parameter", names, key="drift_offset", width=WIDE_PX,
                           format_func=tables.words_of)  # fmt: skip
-    table = drift_table(heats, followed, followed.drift)
-    jumps = tables.jump_table(followed, heats)
+    table = drift_table(heats, followed, found["drift"])
+    jumps = tables.jump_table(followed.tuned, found["drift"], heats)
     unit = {entry.name: tables.unit_text(entry.unit) for entry in followed.tuned.parameters}
     title = f"{tables.words_of(offset)}, {unit[offset]}".rstrip(", ")
     figure = charts.drift_figure(table, jumps, offset, title, theme())
@@ -203,6 +206,7 @@ def drift(found: dict[str, Any], source: str) -> None:
              row["text"])
             for row in jumps.to_dict("records")
         ], numeric={3}))  # fmt: skip
+        put("Suspected: a wander as fast as the log asks for could have gone so far as well.")
     st.download_button("Course of all (CSV)", csv_text(table), "drift.csv", "text/csv",
                        key="drift_csv", on_click="ignore")  # fmt: skip
 

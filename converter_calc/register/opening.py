@@ -205,9 +205,11 @@ def backup_to(connection: sqlite3.Connection, path: Path, target: Path) -> None:
     ------
     InputError : the target exists, cannot be written, or the copy is not sound.
     """
-    part = target.with_name(f".{target.name}.{os.getpid()}.part")
     if target.exists():
         raise refuse(target, "exists already; a backup does not replace a file")
+    if not target.resolve().parent.is_dir():
+        raise refuse(target, "the folder does not exist")
+    part = target.with_name(f".{target.name}.{os.getpid()}.part")
     try:
         with told(path):
             copy = sqlite3.connect(part, isolation_level=None)

@@ -30,15 +30,24 @@ METHOD_STYLES = {
     "linear regression": ("plum", "square-open"),
     "gradient boosting": ("green", "triangle-up-open"),
 }
+#: Colours that stand in for those too dark to be seen on a dark page.
+ON_DARK = {"blue": "sky", "sky": "blue", "plum": "yellow"}
 DASHES = ("solid", "dash", "dot", "dashdot")
 #: Heats in the running mean of the misses.
 RUNNING = 25
+#: A longer time without a heat is a pause: a repair, a new lining [days].
+PAUSE_DAYS = 5
 
 
-def method_style(method: str) -> tuple[str, str]:
-    """Colour (#rrggbb) and marker of a method."""
+def shade(colour: str, theme: str) -> str:
+    """A colour of the palette (#rrggbb) as it is seen on a page of a theme."""
+    return PALETTE[ON_DARK.get(colour, colour) if theme == "dark" else colour]
+
+
+def method_style(method: str, theme: str = "light") -> tuple[str, str]:
+    """Colour (#rrggbb) and marker of a method on a page of a theme."""
     colour, marker = METHOD_STYLES.get(method, ("yellow", "cross"))
-    return PALETTE[colour], marker
+    return shade(colour, theme), marker
 
 
 def misses_figure(
@@ -60,10 +69,11 @@ def misses_figure(
         rows = rows.dropna(subset=["observed", "predicted"])
         miss = rows["predicted"] - rows["observed"]
         running = miss.rolling(RUNNING, min_periods=RUNNING // 2, center=True).median()
-        colour, _ = method_style(method)
+        times, running = _broken(rows["tapped_at"], running)
+        colour, _ = method_style(method, theme)
         figure.add_trace(
             go.Scatter(
-                x=rows["tapped_at"], y=running, name=method, mode="lines",
+                x=times, y=running, name=method, mode="lines",
                 line={"color": colour, "width": 2, "dash": DASHES[place % len(DASHES)]},
                 hovertemplate=f"{method}<br>%{{x|%Y-%m-%d}}: %{{y:.4g}}<extra></extra>",
             )
@@ -76,6 +86,15 @@ def misses_figure(
     return figure
 
 
+def _broken(times: pd.Series[Any], values: pd.Series[Any]) -> tuple[Any, Any]:
+    """Times and values with a blank in every pause of the log, so that no line spans it."""
+    import numpy as np
+
+    x, y = times.to_numpy(), values.to_numpy(dtype=float)
+    pauses = np.flatnonzero(np.diff(x) > np.timedelta64(PAUSE_DAYS, "D")) + 1
+    return np.insert(x, pauses, x[pauses - 1]), np.insert(y, pauses, np.nan)
+
+
 def measured_figure(
     heats: pd.DataFrame, quantity: str, method: str, theme: str = "light", width: int | None = None
 ) -> go.Figure:
@@ -84,7 +103,7 @@ def measured_figure(
 
     rows = heats[(heats["quantity"] == quantity) & (heats["method"] == method)]
     rows = rows.dropna(subset=["observed", "predicted"])
-    colour, marker = method_style(method)
+    colour, marker = method_style(method, theme)
     both = [float(rows[["observed", "predicted"]].quantile(q).agg(e))
             for q, e in ((0.002, "min"), (0.998, "max"))]  # fmt: skip
     figure = go.Figure(
@@ -126,7 +145,7 @@ def calibration_figure(
     )  # fmt: skip
     colours = ("orange", "blue", "green", "plum")
     for place, (quantity, rows) in enumerate(calibration.groupby("quantity", sort=False)):
-        colour = PALETTE[colours[place % len(colours)]]
+        colour = shade(colours[place % len(colours)], theme)
         title = TITLES.get(str(quantity), str(quantity)).split(",")[0]
         figure.add_trace(
             go.Scatter(
@@ -160,7 +179,7 @@ def drift_figure(
     import plotly.graph_objects as go
 
     rows = drift[drift["offset"] == offset]
-    colour = PALETTE["blue"]
+    colour = shade("blue", theme)
     low, high = rows["value"] - 2.0 * rows["deviation"], rows["value"] + 2.0 * rows["deviation"]
     figure = go.Figure(
         [

@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from typing import TYPE_CHECKING
 
+from converter_calc.learning.drift import Drift
 from converter_calc.learning.following import Followed, offsets
 from converter_calc.learning.tuned import Fitted, Tuned, TunedParameter
 from converter_calc.reporting.learning_charts import RUNNING, TITLES
@@ -14,6 +15,7 @@ if TYPE_CHECKING:
     import pandas as pd
 
     from converter_calc.learning.proof import Proof
+    from converter_calc.learning.today import Today
 
 UNITS = {"C": "°C", "mass %": "%", "Nm3": "Nm³", "MJ/t steel": "MJ/t", "kg/t steel": "kg/t"}
 #: Figures of a formula as it is printed.
@@ -130,20 +132,22 @@ def gross_rows(table: pd.DataFrame, most: int) -> list[tuple[str, ...]]:
     ]
 
 
-def jump_table(followed: Followed, heats: pd.DataFrame) -> pd.DataFrame:
+def jump_table(tuned: Tuned, drift: Drift, heats: pd.DataFrame) -> pd.DataFrame:
     """Jumps found: tapped_at and heat_id of the first heat after it, offset, text of its size.
 
-    heats : heat_id and tapped_at in time order.
+    tuned : parameters that the offsets wander from. heats : heat_id and tapped_at in time order.
+    A jump that a wander could have gone as well is called suspected.
     """
     import pandas as pd
 
-    unit = {entry.name: unit_text(entry.unit) for entry in followed.tuned.parameters}
+    unit = {entry.name: unit_text(entry.unit) for entry in tuned.parameters}
     rows = []
-    for jump in followed.drift.jumps:
+    for jump in drift.jumps:
         size, error, shown = jump.size, jump.standard_error, unit[jump.offset]
         if offsets()[jump.offset]:
             size, error, shown = 100.0 * size, 100.0 * error, "%"
         text = f"{plain(size, signed=True)} ± {plain(error)} {shown}".rstrip()
+        text += "" if jump.sure else ", suspected"
         rows.append(
             {
                 "tapped_at": heats["tapped_at"].iloc[jump.row],
@@ -165,6 +169,19 @@ def today_rows(followed: Followed) -> list[tuple[str, ...]]:
         (words_of(name), unit[name], plain(middle[name]), plain(value[name]), plain(error[name]))
         for name in followed.drift.offsets
     ]
+
+
+def left_text(today: Today) -> str:
+    """What the model of what is left adds, and where; empty where none won out of sample."""
+    used = [words_of(name) for name, model in today.models.items() if model.used]
+    if not used:
+        return ""
+    return (
+        f"A model of what is left won out of sample for {', '.join(used)}. It is in the offsets of "
+        "the day that can be saved: converter-calc plan and predict take both with --tuned. The "
+        "fields of the page hold parameters alone, so today's values for them are those that hold "
+        "without it."
+    )
 
 
 def drift_text(drift: pd.DataFrame, jumps: pd.DataFrame, offset: str) -> str:

@@ -14,6 +14,7 @@ from converter_calc.learning.spread_margin import Margin, Shift
 from converter_calc.learning.spread_numbers import Chance, Distribution, Window
 from converter_calc.reporting.charts import PALETTE, faded
 from converter_calc.reporting.html_sheet import Markup, element, joined
+from converter_calc.reporting.learning_tables import LOWERED
 from converter_calc.reporting.spread_text import DIGITS
 
 NAMES = {
@@ -160,12 +161,16 @@ def distribution_rows(found: Iterable[Distribution]) -> list[tuple[str, ...]]:
     """Each result: name, as read, 5, 25, 50, 75, 95 %."""
     return [
         (
-            f"{NAMES.get(d.name, d.label)}, {unit(d.unit)}" if d.unit else d.label,
+            ", ".join(filter(None, (_name(d), unit(d.unit)))),
             number(d.name, d.as_read),
             *(number(d.name, d.quantiles[q]) for q in (0.05, 0.25, 0.50, 0.75, 0.95)),
         )
         for d in found
     ]
+
+
+def _name(d: Distribution) -> str:
+    return NAMES.get(d.name, d.label.translate(LOWERED))
 
 
 def scatter_rows(found: Spread) -> tuple[tuple[str, ...], list[tuple[str, ...]]]:
