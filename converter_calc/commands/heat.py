@@ -31,10 +31,13 @@ def _show(outcome: Any, json_to: str | None, units: str) -> None:
 @JSON
 @UNITS
 @TUNED
+@click.option("--move-aims", is_flag=True, help="Aim the balance past what the log shows is left.")
 @guarded
-def plan(heat: Path, json_to: str | None, units: str, tuned: Path | None) -> None:
+def plan(
+    heat: Path, json_to: str | None, units: str, tuned: Path | None, *, move_aims: bool
+) -> None:
     """Solve for what is missing from the charge of HEAT and print the charge sheet."""
-    _show(planned(heat, tuned), json_to, units)
+    _show(planned(heat, tuned, move_aims=move_aims), json_to, units)
 
 
 @click.command()

@@ -102,7 +102,7 @@ def with_tuned(heat: Path, tuned: Path | None) -> Any:
     return load_today(tuned).tuned.apply(as_heats(heat))
 
 
-def planned(heat: Path, tuned: Path | None) -> Any:
+def planned(heat: Path, tuned: Path | None, *, move_aims: bool = False) -> Any:
     """The heat planned; with the offsets of the day where a file of them is given."""
     from converter_calc.planning.plan import as_heats, plan
 
@@ -110,7 +110,7 @@ def planned(heat: Path, tuned: Path | None) -> Any:
         return plan(heat)
     from converter_calc.learning.today import load_today, plan_one
 
-    return plan_one(as_heats(heat), load_today(tuned))
+    return plan_one(as_heats(heat), load_today(tuned), move_aims=move_aims)
 
 
 def _tell_infeasible(error: InfeasibleError) -> None:

@@ -34,6 +34,8 @@ MOST_JUMPS = 12
 MOST_STEPS, FEW_STEPS = 25, 6
 #: A jump at the very end of the log cannot yet be told from a bad sample.
 LAST_HEATS = 3
+#: Nor one at its start from the start itself.
+FIRST_HEATS = 30
 #: Log step of the differences that give the slope of the likelihood.
 LOG_STEP = 1e-3
 #: Speeds are looked for from this share of the noise on.
@@ -231,7 +233,7 @@ def _scores(back: Looked, known: list[tuple[int, int]]) -> Array:
     """Standard scores of a shock at each heat and offset; none where one is known already."""
     information = np.where(back.push_information > 0.0, back.push_information, np.inf)
     score: Array = back.push / np.sqrt(information)
-    score[0] = 0.0
+    score[:FIRST_HEATS] = 0.0
     score[max(len(score) - LAST_HEATS, 0) :] = 0.0
     for row, j in known:
         score[max(row - APART, 0) : row + APART + 1, j] = 0.0

@@ -65,9 +65,7 @@ class Followed:
             else:
                 found[name] += offset[j]
         places = [self.tuned.names.index(name) for name in self.drift.offsets]
-        covariance[places, :] = 0.0
-        covariance[:, places] = 0.0
-        covariance[np.ix_(places, places)] = cov * np.outer(slopes, slopes)
+        self._lay_over(covariance, places, cov * np.outer(slopes, slopes))
         errors = np.sqrt(np.diag(covariance))
         return replace(
             self.tuned,
@@ -77,6 +75,20 @@ class Followed:
             ),
             covariance=covariance,
         )
+
+    @staticmethod
+    def _lay_over(covariance: Array, places: list[int], cov: Array) -> None:
+        """Put in the covariance of the offsets; what the others share with them stays.
+
+        cov holds for the other parameters as they are, so these add what they carry over: with
+        B the regression of the offsets' parameters on the others, B C B' and B C.
+        """
+        rest = [k for k in range(len(covariance)) if k not in places]
+        others = covariance[np.ix_(rest, rest)]
+        B = covariance[np.ix_(places, rest)] @ np.linalg.pinv(others, hermitian=True)
+        covariance[np.ix_(places, rest)] = B @ others
+        covariance[np.ix_(rest, places)] = (B @ others).T
+        covariance[np.ix_(places, places)] = cov + B @ others @ B.T
 
 
 def follow_log(

@@ -32,7 +32,8 @@ class ResidualModel:
 
     features : names (p). low, high : features are drawn in to these, the range of all but the
     outermost heats it was fitted to. mean, scale : of the features. slopes : per standard
-    deviation of a feature, in the unit of y. penalty : chosen. used : whether it won. gain,
+    deviation of a feature, in the unit of y. least, most : what it adds stays between these,
+    the range over the heats it was fitted to. penalty : chosen. used : whether it won. gain,
     gain_error : mean absolute error saved out of sample and its standard error, unit of y.
     """
 
@@ -43,6 +44,8 @@ class ResidualModel:
     scale: Array
     constant: float
     slopes: Array
+    least: float
+    most: float
     penalty: float
     used: bool
     gain: float
@@ -55,7 +58,7 @@ class ResidualModel:
         added: Array = (
             self.constant + _standard(self.drawn_in(X), self.mean, self.scale) @ self.slopes
         )
-        return added
+        return np.clip(added, self.least, self.most)
 
     def document(self) -> dict[str, Any]:
         """Everything as plain values, ready for JSON; None where a bound or scale is infinite."""
@@ -81,6 +84,8 @@ class ResidualModel:
             features=features,
             **arrays,
             constant=float(document["constant"]),
+            least=float(document["least"]),
+            most=float(document["most"]),
             penalty=np.inf if penalty is None else float(penalty),
             used=bool(document["used"]),
             gain=float(document["gain"]),
@@ -116,6 +121,8 @@ def fit_residual(features: list[str], X: Array, y: Array) -> ResidualModel:
             nothing + 1.0,
             0.0,
             nothing,
+            0.0,
+            0.0,
             float("inf"),
             used=False,
             gain=0.0,
@@ -142,9 +149,11 @@ def fit_residual(features: list[str], X: Array, y: Array) -> ResidualModel:
     error = float(saved[best].std(ddof=1) / np.sqrt(saved.shape[1]))
     mean, scale = _moments(X)
     ((constant, slopes),) = _ridges(_standard(X, mean, scale), y, PENALTIES[best : best + 1])
+    added = constant + _standard(X, mean, scale) @ slopes
+    least, most = np.quantile(added, [OUTERMOST, 1.0 - OUTERMOST]).tolist()
     return ResidualModel(
-        tuple(features), low, high, mean, scale, constant, slopes, float(PENALTIES[best]),
-        gain > CLEARLY * error, gain, error,
+        tuple(features), low, high, mean, scale, constant, slopes, least, most,
+        float(PENALTIES[best]), gain > CLEARLY * error, gain, error,
     )  # fmt: skip
 
 

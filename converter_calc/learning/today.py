@@ -1,7 +1,7 @@
 """What the log says of the heat to come: parameters of today, and what is left on top.
 
-A plan aims the balance past what heats of its kind have shown above it, so that the heat itself
-ends at the aim; a prediction adds it.
+A plan takes today's parameters and shows, beside the balance, where heats like it have ended; if
+asked, it aims the balance past that.
 """
 
 from __future__ import annotations
@@ -49,8 +49,8 @@ VERSION = 1
 AIMS = {"aim_temp_C": "end_temp_C", "aim_C_pct": "end_C_pct", "aim_P_pct": "end_P_pct"}
 #: Plans made until what is left, which depends on the plan itself, stands still.
 PLANS = 6
-#: The correction of a logarithm, or of a temperature [K], is not trusted beyond this.
-MOST = {"end_temp_C": 40.0, "end_C_pct": 0.7, "end_P_pct": 0.7, "end_Mn_pct": 0.7}
+#: Features named in a caution, at most.
+NAMED = 3
 
 
 @dataclass(frozen=True)
@@ -72,30 +72,26 @@ class Today:
     def left(self, outcome: Outcome) -> dict[str, Array]:
         """What heats like these have shown above the balance, (n,) each, transformed.
 
-        Limited to `MOST`; zero where no model won.
+        Within the range that the log has shown; only for quantities whose model won.
         """
-        frame = _frame_of(outcome)
-        materials = [name for name, m in outcome.heats.materials.items() if m is not None]
-        names, X = features_of(frame, materials)
-        ends = outcome.columns()
-        for quantity in FOLLOWED:
-            if quantity in ends:
-                names.append(balance_feature(quantity))
-                value = quantities()[quantity].transformed(np.asarray(ends[quantity], dtype=float))
-                X = np.column_stack([X, value])
-        found = {}
-        for quantity, model in self.models.items():
-            if not model.used:
-                continue
-            columns = np.full((outcome.n, len(model.features)), np.nan)
-            for j, feature in enumerate(model.features):
-                if feature in names:
-                    columns[:, j] = X[:, names.index(feature)]
-                elif feature.endswith("_kg_per_t"):
-                    columns[:, j] = 0.0
-            most = MOST[quantity]
-            found[quantity] = np.clip(model.predict(columns), -most, most)
-        return found
+        names, X = _features(outcome)
+        return {
+            quantity: model.predict(_columns(model, names, X))
+            for quantity, model in self.models.items()
+            if model.used
+        }
+
+    def strange(self, outcome: Outcome) -> list[list[str]]:
+        """Features of each heat that lie outside the usual range of the log."""
+        names, X = _features(outcome)
+        found: list[dict[str, None]] = [{} for _ in range(outcome.n)]
+        for model in self.models.values():
+            if model.used:
+                columns = _columns(model, names, X)
+                far = (columns < model.low) | (columns > model.high)
+                for row, j in np.argwhere(far).tolist():
+                    found[row][model.features[j]] = None
+        return [list(row) for row in found]
 
     def document(self) -> dict[str, Any]:
         """Everything as plain values, ready for JSON."""
@@ -165,41 +161,45 @@ def in_time_order(frame: pd.DataFrame) -> pd.DataFrame:
     return frame.sort_values("tapped_at", kind="stable").reset_index(drop=True)
 
 
-def plan_today(heats: HeatTable, today: Today) -> list[tuple[Array, Outcome]]:
-    """Plan heats with today's parameters, the balance aimed past what is left.
+def plan_today(
+    heats: HeatTable, today: Today, *, move_aims: bool = False
+) -> list[tuple[Array, Outcome]]:
+    """Plan heats with today's parameters, and say where heats like them have ended.
 
-    Returns (row numbers, outcome) of each group, as `plan_heats`; a caution tells where the aims
-    of the balance were moved. The end point of the outcome is that of the balance; the heat
-    itself is expected at the aims given.
+    move_aims : aim the balance past what is left, so that the expected end is the aim. What is
+    left was learnt from heats as they were run; moving aims by it supposes that they go on so.
+
+    Returns (row numbers, outcome) of each group, as `plan_heats`; `Outcome.expected` and, where
+    aims were moved, `Outcome.wanted` are filled.
     """
     tuned = today.tuned.apply(heats)
     groups = plan_heats(tuned)
-    if not any(model.used for model in today.models.values()):
-        return groups
-    moved = tuned
-    for _ in range(PLANS):
-        left = {name: np.zeros(heats.n) for name in AIMS}
+    if move_aims and any(model.used for model in today.models.values()):
+        for _ in range(PLANS):
+            left = {name: np.zeros(heats.n) for name in AIMS}
+            for rows, outcome in groups:
+                found = today.left(outcome)
+                good = np.array([status == "solved" for status in outcome.status])
+                for aim, quantity in AIMS.items():
+                    if quantity in found:
+                        left[aim][rows] = np.where(good, found[quantity], 0.0)
+            groups = plan_heats(with_values(tuned, **_moved_aims(tuned, left)))
         for rows, outcome in groups:
-            found = today.left(outcome)
-            for aim, quantity in AIMS.items():
-                if quantity in found:
-                    good = np.array([status == "solved" for status in outcome.status])
-                    left[aim][rows] = np.where(good, found[quantity], 0.0)
-        moved = with_values(tuned, **_moved_aims(tuned, left))
-        groups = plan_heats(moved)
-    for rows, outcome in groups:
-        _tell(outcome, tuned.take(rows) if len(rows) < heats.n else tuned)
+            _tell_moved(outcome, tuned, rows)
+    for _, outcome in groups:
+        outcome.expected = expected_end(outcome, today)
+        _tell_strange(outcome, today)
     return groups
 
 
-def plan_one(heats: HeatTable, today: Today) -> Outcome:
-    """One heat planned with today's parameters.
+def plan_one(heats: HeatTable, today: Today, *, move_aims: bool = False) -> Outcome:
+    """One heat planned with today's parameters; see `plan_today`.
 
     Raises InputError for more heats than one, InfeasibleError and ConvergenceError as `plan`.
     """
     if heats.n != 1:
         raise InputError([Fault("heat", f"one heat is asked for, given {heats.n}")])
-    ((_, outcome),) = plan_today(heats, today)
+    ((_, outcome),) = plan_today(heats, today, move_aims=move_aims)
     raise_unless_solved(outcome)
     raise_unless_closed(outcome)
     return outcome
@@ -215,9 +215,12 @@ def expected_end(outcome: Outcome, today: Today) -> dict[str, tuple[Array, Array
     columns = outcome.columns()
     found = {}
     for name, sd in today.scatter.items():
+        if name not in columns:
+            continue
         quantity = quantities()[name]
         value = np.asarray(columns[name], dtype=float)
-        at = quantity.plain(quantity.transformed(value) + left.get(name, 0.0))
+        with np.errstate(all="ignore"):  # an unsolved heat has no logarithm
+            at = quantity.plain(quantity.transformed(value) + left.get(name, 0.0))
         found[name] = (at, at * sd if quantity.log else np.full(outcome.n, sd))
     return found
 
@@ -263,7 +266,7 @@ def today_from(document: Any, place: str = "offsets") -> Today:
             (str(a), str(b), str(c), float(d), float(e), bool(sure))
             for a, b, c, d, e, sure in document["jumps"]
         )
-        _ = [MOST[name] for name in (*models, *scatter)]
+        _ = [FOLLOWED.index(name) for name in (*models, *scatter)]
         as_of, tuned = str(document["as_of"]), document["tuned"]
     except (KeyError, TypeError, ValueError, AttributeError) as error:
         raise InputError([Fault(place, f"is incomplete or misshapen: {error}")]) from error
@@ -304,6 +307,29 @@ def _materials_of(frame: pd.DataFrame) -> list[str]:
     ]
 
 
+def _features(outcome: Outcome) -> tuple[list[str], Array]:
+    """Features of planned heats, those that are the balance's own predictions among them."""
+    names, X = features_of(_frame_of(outcome), list(outcome.heats.materials))
+    ends = outcome.columns()
+    for quantity in FOLLOWED:
+        if quantity in ends:
+            names.append(balance_feature(quantity))
+            value = quantities()[quantity].transformed(np.asarray(ends[quantity], dtype=float))
+            X = np.column_stack([X, value])
+    return names, X
+
+
+def _columns(model: ResidualModel, names: list[str], X: Array) -> Array:
+    """The features of a model, (n, p): a material not charged is none of it, others are blank."""
+    columns = np.full((len(X), len(model.features)), np.nan)
+    for j, feature in enumerate(model.features):
+        if feature in names:
+            columns[:, j] = X[:, names.index(feature)]
+        elif feature.endswith("_kg_per_t"):
+            columns[:, j] = 0.0
+    return columns
+
+
 def _frame_of(outcome: Outcome) -> pd.DataFrame:
     """A planned heat as a row of a log: readings of its charge."""
     import pandas as pd
@@ -331,17 +357,18 @@ def _moved_aims(heats: HeatTable, left: Mapping[str, Array]) -> dict[str, Array]
     return aims
 
 
-def _tell(outcome: Outcome, wanted: HeatTable) -> None:
-    """Say where the balance aims elsewhere than the heat."""
+def _tell_moved(outcome: Outcome, tuned: HeatTable, rows: Array) -> None:
+    """Keep the aims of the heats themselves, and say where the balance aims elsewhere."""
     texts = {
         "aim_temp_C": ("temperature", "C", ".0f"),
         "aim_C_pct": ("carbon", "%", ".4f"),
         "aim_P_pct": ("phosphorus", "%", ".4f"),
     }
     for aim, (name, unit, digits) in texts.items():
-        now, given = outcome.heats.values[aim], wanted.values[aim]
+        now, given = outcome.heats.values[aim], tuned.values[aim][rows]
         mask = np.isfinite(given) & (np.abs(now - given) > 1e-6 * np.abs(given))
         if mask.any():
+            outcome.wanted[aim] = given
             text = (
                 f"the balance aims at {{now:{digits}}} {unit} {name} for an aim of "
                 f"{{given:{digits}}} {unit}: heats like this have ended so far off it"
@@ -350,3 +377,16 @@ def _tell(outcome: Outcome, wanted: HeatTable) -> None:
                 Caution("learnt-aim", f"aim.{aim.removeprefix('aim_')}", mask, text,
                         {"now": now, "given": given})
             )  # fmt: skip
+
+
+def _tell_strange(outcome: Outcome, today: Today) -> None:
+    """Say which features of a heat the log has hardly shown."""
+    strange = today.strange(outcome)
+    for text in dict.fromkeys(", ".join(row[:NAMED]) for row in strange if row):
+        mask = np.array([", ".join(row[:NAMED]) == text for row in strange])
+        outcome.cautions.append(
+            Caution(
+                "unlike-log", "tuned", mask,
+                f"the log has hardly a heat with such {text}: what is expected by it is a guess",
+            )
+        )  # fmt: skip

@@ -187,6 +187,20 @@ def _charge(outcome: Outcome) -> list[Caution]:
                 {"given": oxygen},
             )
         )
+    lime = outcome.charged_kg.get(outcome.heats.choices.lime, 0.0)
+    found += [
+        Caution(
+            f"no-{what}",
+            f"charge.{field}",
+            np.asarray(kg) <= 0.0,
+            f"no {what} is charged: what is not given counts as none when a heat is predicted",
+        )
+        for what, field, kg in (
+            ("scrap", "scrap_kg", outcome.kind_kg("scrap")),
+            ("lime", f"{outcome.heats.choices.lime}_kg", lime),
+        )
+        if outcome.ask.heat == "T_K"
+    ]
     fluorspar = outcome.state.slag_species_kg.get("CaF2", 0.0)
     found.append(
         Caution(

@@ -93,7 +93,9 @@ class Outcome:
     ids : names of the heats. ask : what was unknown. p, x, state : givens, unknowns and the
     state at the answer. converged : per heat. status : "solved", "infeasible" or
     "not converged" per heat; binding, frees : why, and what would help; nearest : the end
-    point that can be reached. cautions : warnings.
+    point that can be reached. cautions : warnings. expected : (value, deviation) of quantities of
+    the end by what heats like these have shown, where a log told. wanted : aims of the heats
+    where the balance was aimed elsewhere.
     """
 
     heats: HeatTable
@@ -109,6 +111,8 @@ class Outcome:
     frees: list[list[str]] = default(default_factory=list)
     nearest: list[dict[str, float]] = default(default_factory=list)
     cautions: list[Caution] = default(default_factory=list)
+    expected: dict[str, tuple[Num, Num]] = default(default_factory=dict)
+    wanted: dict[str, Num] = default(default_factory=dict)
 
     @property
     def n(self) -> int:
@@ -310,7 +314,14 @@ class Outcome:
                 "relative_closure": plain(closure.relative),
             }
             (balance if name == "energy" else balance["elements"])[name] = entry
-        return {
+        told: dict[str, Any] = {}
+        if self.expected:
+            told["expected_end"] = plain(
+                {name: {"value": x, "deviation": sd} for name, (x, sd) in self.expected.items()}
+            )
+        if self.wanted:
+            told["wanted"] = plain(self.wanted)
+        return told | {
             "heat_id": self.heats.ids[index],
             "status": self.status[index],
             "recipe": plain(self.recipe()),

@@ -208,7 +208,7 @@ def backup_to(connection: sqlite3.Connection, path: Path, target: Path) -> None:
     if target.exists():
         raise refuse(target, "exists already; a backup does not replace a file")
     if not target.resolve().parent.is_dir():
-        raise refuse(target, "the folder does not exist")
+        raise refuse(target, "cannot be written: the folder does not exist")
     part = target.with_name(f".{target.name}.{os.getpid()}.part")
     try:
         with told(path):

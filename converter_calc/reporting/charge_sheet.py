@@ -91,7 +91,8 @@ def _kind(outcome: Outcome, name: str) -> str:
 def _end_point(outcome: Outcome, i: int, show: Display) -> list[str]:
     s, values = outcome.state, outcome.heats.values
     temp_C, aim = float(at(s.T_K, i)) - ZERO_C_K, values["aim_temp_C"][i]
-    lines = ["End of blow"]
+    lines = [*_expected(outcome, i, show), "End of blow, in the balance"
+             if outcome.expected else "End of blow"]  # fmt: skip
     more = f"aim {show.temperature_of(aim):,.0f}" if np.isfinite(aim) else ""
     lines.append(_row("temperature", f"{show.temperature_of(temp_C):,.1f}", show.temperature, more))
     for element, x in sorted(outcome.steel_pct().items(), key=lambda e: _order(e[0])):
@@ -107,6 +108,28 @@ def _end_point(outcome: Outcome, i: int, show: Display) -> list[str]:
     lines.append(_mass("steel tapped", steel, steel, show))
     charge = float(at(s.hot_metal_kg + outcome.kind_kg("scrap"), i))
     lines.append(_row("metallic yield", f"{100.0 * steel / charge:.2f}", "%"))
+    return [*lines, ""]
+
+
+def _expected(outcome: Outcome, i: int, show: Display) -> list[str]:
+    """Where heats like this have ended, beside the aims of the heat itself."""
+    if not outcome.expected:
+        return []
+    lines = ["Expected, by what heats like this have shown"]
+    for name, (value, deviation) in outcome.expected.items():
+        x, sd = float(at(value, i)), float(at(deviation, i))
+        aim_name = "aim_" + name.removeprefix("end_")
+        aims = outcome.wanted.get(aim_name, outcome.heats.values.get(aim_name, np.nan))
+        aim = float(at(aims, i))
+        if name == "end_temp_C":
+            shown, unit = f"{show.temperature_of(x):,.0f}", show.temperature
+            told = f"± {sd * (1.8 if unit == 'F' else 1.0):.0f}"
+            goal = f"aim {show.temperature_of(aim):,.0f}"
+            label = "temperature"
+        else:
+            shown, unit, told, goal = f"{x:.4f}", "%", f"± {sd:.4f}", f"aim {aim:.4f}"
+            label = f"[{name.removeprefix('end_').removesuffix('_pct')}]"
+        lines.append(_row(label, shown, unit, f"{told:<11}{goal if np.isfinite(aim) else ''}"))
     return [*lines, ""]
 
 

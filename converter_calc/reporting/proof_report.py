@@ -53,19 +53,19 @@ def proof_text(proof: Proof) -> str:
             f"Out of sample: {len(proof.rows)} heats in {len(proof.stages)} stages, each predicted"
             " from heats before it"
         ),
-        f"  {'':<14}{'method':<20}{'heats':>7}{'mean abs. error':>20}{'bias':>10}{'hits':>14}",
+        f"  {'':<14}{'method':<20}{'heats':>7}{'mean abs. error':>20}{'bias':>10}{'hits':>16}",
     ]
     scores = proof.scores(without_misread=True)
     for row in scores.to_dict("records"):
         digits = DIGITS[row["quantity"]]
         name = row["quantity"] if row["method"] == "untuned" else ""
-        error = f"{row['mae']:.{digits}f} +- {row['mae_error']:.{digits}f}"
-        hits = f"{row['hit_pct']:.1f} +- {row['hit_error_pct']:.1f} %"
+        error = f"{row['mae']:.{digits}f} ± {row['mae_error']:.{digits}f}"
+        hits = f"{row['hit_pct']:.1f} ± {row['hit_error_pct']:.1f} %"
         lines.append(
             f"  {name:<14}{row['method']:<20}{row['heats']:>7}{error:>20}"
-            f"{row['bias']:>+10.{digits}f}{hits:>14}"
+            f"{row['bias']:>+10.{digits}f}{hits:>16}"
         )
-    lines += ["", *(_misread_lines(proof)), ""]
+    lines += ["", *_order_lines(proof), *_misread_lines(proof), ""]
     lines.append("Stated intervals of the last method, and how often they held [%]")
     table = proof.calibration(levels=(0.5, 0.8, 0.95))
     for quantity, rows in table.groupby("quantity", sort=False):
@@ -76,6 +76,16 @@ def proof_text(proof: Proof) -> str:
     lines += ["", _residual_line(proof), "", "For context, not our result:"]
     lines += [f"  {text}" for text in ANCHORS]
     return "\n".join(lines) + "\n"
+
+
+def _order_lines(proof: Proof) -> list[str]:
+    """What to know where the log does not say when heats were tapped."""
+    import pandas as pd
+
+    missing = int(pd.isna(pd.Series(proof.tapped_at, dtype=object)).sum())
+    if not missing:
+        return []
+    return [f"{missing} of these heats have no time of tapping: they stand last, as in the log"]
 
 
 def proof_document(proof: Proof) -> dict[str, Any]:
@@ -123,7 +133,8 @@ def proof_html(proof: Proof, title: str = "Proof out of sample") -> str:
                 "the heats before it; nothing is fitted to what comes."),
         element("h2", "Scores"),
         _table(proof.scores(without_misread=True)),
-        *(element("p", line) for line in (*_misread_lines(proof), _residual_line(proof))),
+        *(element("p", line)
+          for line in (*_order_lines(proof), *_misread_lines(proof), _residual_line(proof))),
         element("h2", "Scores with every reading"),
         _table(proof.scores()),
     ]  # fmt: skip

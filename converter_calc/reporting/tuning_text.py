@@ -129,7 +129,9 @@ def _not_used(tuned: Tuned) -> list[str]:
     for row in table.head(MOST_SHOWN).to_dict("records"):
         sure = isinstance(row["expected"], float) and math.isfinite(row["expected"])
         expected = f", expected {row['expected']:.4g}" if sure else ""
-        given = f" = {row['given']}" if row["given"] not in ("", None) else ""
+        value = row["given"]
+        shown = f"{value:.6g}" if isinstance(value, float) else value
+        given = f" = {shown}" if value not in ("", None) else ""
         lines.append(f"  heat {row['heat_id']}: {row['field']}{given}{expected}: {row['reason']}")
     if len(table) > MOST_SHOWN:
         lines.append(f"  and {len(table) - MOST_SHOWN} more; --json lists them all")
