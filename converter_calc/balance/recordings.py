@@ -53,7 +53,7 @@ class Recordings:
 
     def find(self, p: Problem, ask: Ask) -> Recording | None:
         """The recording for heats like this one; None for the first few."""
-        key = (ask, _kind_of(p))
+        key = (ask, kind_of(p))
         with self._lock:
             if key in self._made:
                 self._made.move_to_end(key)
@@ -78,8 +78,8 @@ def _cut(store: OrderedDict[Any, Any]) -> None:
 RECORDINGS = Recordings()
 
 
-def _kind_of(p: Problem) -> Any:
-    """What a recording takes as it stands: names, choices, contents of the materials."""
+def kind_of(p: Problem) -> Any:
+    """What a recording takes as it stands: names, choices, contents of the materials; hashable."""
     return tuple(
         tuple(getattr(p, part.name)) if part.name in PARTS else _frozen(getattr(p, part.name))
         for part in fields(p)

@@ -12,8 +12,9 @@ from typing import Any
 
 import numpy as np
 
-from converter_calc.balance.asks import Ask
+from converter_calc.balance.asks import Ask, evaluate_ask
 from converter_calc.balance.heats import HeatTable
+from converter_calc.balance.problem import build_problem
 from converter_calc.basis.dual import Array
 from converter_calc.basis.errors import Fault, InputError
 from converter_calc.basis.units import MJ
@@ -191,12 +192,10 @@ def spread(
 
     mine, (others, need) = together(lambda: ends(0, half), rest, pays=plan.draws >= SHARED_FROM)
     drawn = mine.joined(others)
-    as_read = {
-        name: float(values[0])
-        for name, values in draw(
-            charge, PREDICT, x, model, np.zeros((model.size, 1)), end_points
-        ).values.items()
-    }
+    p = build_problem(charge)
+    state = evaluate_ask(p, PREDICT, dict(x))
+    read = end_points(charge, PREDICT, p, state, x)
+    as_read = {name: float(values[0]) for name, values in read.items()}
     wanted = tuple(windows) if windows is not None else windows_of(charge, 0, as_read)
     hits = all_hits(wanted, drawn.values)
     chances = tuple(

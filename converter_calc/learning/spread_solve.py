@@ -8,6 +8,8 @@ derivatives finish. What does not converge so goes through the ordinary solver.
 
 from __future__ import annotations
 
+import threading
+from collections import OrderedDict
 from collections.abc import Mapping
 from typing import Any
 
@@ -16,6 +18,7 @@ import numpy as np
 from converter_calc.balance.asks import Ask
 from converter_calc.balance.newton import Unknowns, dense, follow
 from converter_calc.balance.problem import Problem
+from converter_calc.balance.recordings import kind_of
 from converter_calc.balance.solving import Memory, solve_ask, units_of
 from converter_calc.balance.system import System
 from converter_calc.basis.dual import Array
@@ -30,6 +33,9 @@ FOLLOWED = 256
 FOLLOWED_A_TERM = 4
 #: Steps from the heat itself, which is further away than a fit.
 FAR_STEPS = 16
+#: Kinds of heat whose recorded equations a thread keeps for the next spread.
+KINDS_KEPT = 4
+_KEPT = threading.local()
 #: Residual at which a followed draw may be fitted.
 GOOD = 1e-7
 
@@ -46,7 +52,7 @@ def solve_draws(
     solver; otherwise it stays unsolved.
     """
     n = p.n
-    system = System(p, ask, Memory().recorded)
+    system = System(p, ask, _memory_of(p).recorded)
     names = list(ask.unknowns)
     unit = units_of(p, names)
     inverse = _inverse_at(system, {name: heat[name] for name in names}, unit)
@@ -87,6 +93,17 @@ def solve_draws(
             x[name][missed] = solved.unknowns[name]
         converged[missed] = solved.converged
     return x, converged
+
+
+def _memory_of(p: Problem) -> Memory:
+    """What this thread has recorded for heats of this kind: replaying fills arrays of its own."""
+    kept: OrderedDict[Any, Memory] = _KEPT.__dict__.setdefault("memory", OrderedDict())
+    kind = kind_of(p)
+    memory = kept.pop(kind, None) or Memory()
+    kept[kind] = memory
+    while len(kept) > KINDS_KEPT:
+        kept.popitem(last=False)
+    return memory
 
 
 def _cut(x: Any, rows: Array) -> Any:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterable, Iterator
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -41,10 +42,14 @@ def scrap_given(heats: HeatTable) -> Array:
 
 
 def with_values(heats: HeatTable, **changes: Any) -> HeatTable:
-    """A copy with some numeric inputs replaced."""
-    copy = heats.take(np.arange(heats.n))
-    copy.values = dict(copy.values)
-    copy.masses_kg = dict(copy.masses_kg)
+    """A copy with some numeric inputs replaced; what is not replaced is shared, not copied."""
+    copy = replace(
+        heats,
+        values=dict(heats.values),
+        masses_kg=dict(heats.masses_kg),
+        hm_pct=dict(heats.hm_pct),
+        returned=dict(heats.returned),
+    )
     for name, x in changes.items():
         copy.values[name] = np.array(np.broadcast_to(np.asarray(x, dtype=float), (heats.n,)))
     return copy
