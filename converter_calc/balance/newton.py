@@ -180,6 +180,7 @@ def follow(
     inverse: Sequence[Sequence[Any]],
     indices: Array,
     steps: int,
+    near_enough: float = POLISHED,
 ) -> tuple[Unknowns, Array]:
     """Quasi-Newton from an inverse Jacobian that is nearly right: values only, so quick.
 
@@ -191,7 +192,7 @@ def follow(
     Returns
     -------
     The best unknowns seen and their residual norm; what is not solved goes to `solve`. A heat
-    whose residual is at most POLISHED takes one more step unseen, which gains at least two
+    whose residual is at most `near_enough` takes one more step unseen, which gains at least two
     digits; the state worked out from it shows the residual that is left.
 
     Source: Broyden's first method in the form that keeps the steps instead of a matrix (C.T.
@@ -214,7 +215,7 @@ def follow(
             open_ = np.flatnonzero(least[run.places] > RESIDUAL)
             if not open_.size:
                 break
-            near = least[run.places] <= POLISHED  # one more step, and it is there
+            near = least[run.places] <= near_enough  # one more step, and it is there
             if step >= NARROWED_FROM and open_.size < 0.7 * run.places.size:
                 run = run.narrowed(open_)
                 parts = [_cut(part, open_) for part in parts]

@@ -24,8 +24,6 @@ from converter_calc.balance.system import System
 from converter_calc.basis.dual import Array
 from converter_calc.basis.tolerances import (
     FOLLOWED_STEPS,
-    POLISHED,
-    RESIDUAL_STALLED,
 )
 
 #: Draws followed from the heat itself, and the least number a coefficient of the fit.
@@ -36,6 +34,9 @@ FAR_STEPS = 16
 #: Kinds of heat whose recorded equations a thread keeps for the next spread.
 KINDS_KEPT = 4
 _KEPT = threading.local()
+#: Residual from which a draw takes one last step, which gains two digits or more: far below
+#: what any draw differs from the next by.
+DRAWN = 1e-9
 #: Residual at which a followed draw may be fitted.
 GOOD = 1e-7
 
@@ -59,7 +60,7 @@ def solve_draws(
 
     def followed(start: Unknowns, rows: Array, steps: int) -> tuple[Unknowns, Array]:
         some = {name: _cut(size, rows) for name, size in unit.items()}
-        return follow(system, start, some, inverse, rows, steps)
+        return follow(system, start, some, inverse, rows, steps, DRAWN)
 
     def from_heat(rows: Array) -> Unknowns:
         return {name: np.full(rows.size, float(heat[name][0])) for name in names}
@@ -79,13 +80,13 @@ def solve_draws(
         guess = _fitted(z[:, rows[good]], answers, z)
         begin = {name: guess[k] * unit[name] for k, name in enumerate(names)}
         x, left = followed(begin, everything, FOLLOWED_STEPS)
-    missed = np.flatnonzero(left > POLISHED)
+    missed = np.flatnonzero(left > DRAWN)
     if missed.size:  # afresh from where they stand, without the steps remembered
         start = {name: x[name][missed] for name in names}
         again, left[missed] = followed(start, missed, FAR_STEPS)
         for name in names:
             x[name][missed] = again[name]
-    converged = left <= RESIDUAL_STALLED
+    converged = left <= DRAWN
     missed = np.flatnonzero(~converged)
     if missed.size and all_ways:
         solved = solve_ask(p.take(missed), ask)
