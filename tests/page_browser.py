@@ -121,6 +121,14 @@ def box(page: Any, label: str) -> Any:
     return page.get_by_role("textbox", name=label, exact=True)
 
 
+def value_in(page: Any, label: str) -> str:
+    """What a field shows; the browser fills a field that was set for it in its own time."""
+    from playwright.sync_api import expect
+
+    expect(box(page, label)).not_to_have_value("", timeout=10000)
+    return str(box(page, label).input_value())
+
+
 def write(page: Any, label: str, text: str) -> None:
     """Type into a field as a person does, key by key, and press Enter."""
     target = box(page, label)

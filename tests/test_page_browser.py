@@ -122,7 +122,7 @@ def test_reload_and_shared_address_restore_the_heat(page: Any, chromium: Any, ad
     page.reload()
     pb.box(page, "Si, %").wait_for(timeout=30000)
     pb.settled(page)
-    assert pb.box(page, "Si, %").input_value() == "0.7"
+    assert pb.value_in(page, "Si, %") == "0.7"
     assert pb.figure_in(page, "scrap, all") == scrap
     other, outside = pb.watched(chromium, address)
     pb.go(other, link)
@@ -137,7 +137,7 @@ def test_two_sessions_do_not_mix(page: Any, chromium: Any, address: str) -> None
     before = pb.figure_in(other, "scrap, all")
     pb.write(page, "Si, %", "0.9")
     pb.write(other, "End carbon, %", "0.041")
-    assert pb.box(other, "Si, %").input_value() == "0.48"
+    assert pb.value_in(other, "Si, %") == "0.48"
     assert pb.figure_in(page, "scrap, all") != before
     other.context.close()
 
@@ -189,7 +189,7 @@ def test_own_price_and_material_as_a_person_does_it(page: Any, tmp_path: Path) -
     pb.write(page, "Price, currency/t", "410,5")
     pb.write(page, "Moisture, %", "99")
     assert page.get_by_text("99 is outside 0 to 30 %").first.is_visible()
-    assert pb.box(page, "Price, currency/t").input_value() == "410,5"
+    assert pb.value_in(page, "Price, currency/t") == "410,5"
     pb.write(page, "Moisture, %", "0,4")
     pb.write(page, "Its name", "Rail ends")
     page.get_by_role("button", name="Add it").click()
