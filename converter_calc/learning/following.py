@@ -36,13 +36,14 @@ class Followed:
     """A tuned model and how its offsets followed a log of n heats (in time order).
 
     tuned : parameters they are offsets from. names : the m quantities of the log that were
-    followed. predicted : by the tuned model, transformed, (n, m). residuals : observed less
-    predicted. H : derivative by each offset, (n, m, k). drift : the offsets; in `Drift.offsets`
+    followed. materials : those that have a column. predicted : by the tuned model, transformed,
+    (n, m). residuals : observed less predicted. H : derivative by each offset, (n, m, k). drift : the offsets; in `Drift.offsets`
     log offsets are shares.
     """
 
     tuned: Tuned
     names: tuple[str, ...]
+    materials: tuple[str, ...]
     predicted: Array
     residuals: Array
     H: Array
@@ -132,7 +133,7 @@ def follow_log(
     )  # fmt: skip
     if learn < len(frame):
         drift = _followed(drift, drift.walk, y, H)
-    return Followed(tuned, names, played.predicted[:, columns], y, H, drift)
+    return Followed(tuned, names, log.materials, played.predicted[:, columns], y, H, drift)
 
 
 def _prior_deviations(tuned: Tuned, wander: tuple[str, ...]) -> Array:

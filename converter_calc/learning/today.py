@@ -6,7 +6,6 @@ asked, it aims the balance past that.
 
 from __future__ import annotations
 
-import json
 from collections.abc import Mapping
 from dataclasses import dataclass
 from pathlib import Path
@@ -27,9 +26,10 @@ from converter_calc.learning.following import (
     offsets,
     top_up,
 )
+from converter_calc.learning.kept_files import load_document, save_document
 from converter_calc.learning.replay_quantities import quantities
 from converter_calc.learning.residual import ResidualModel
-from converter_calc.learning.tuned import LARGEST_FILE_BYTES, Tuned, tuned_from
+from converter_calc.learning.tuned import Tuned, tuned_from
 from converter_calc.learning.tuning import tune
 from converter_calc.planning.outcome import Caution, Outcome
 from converter_calc.planning.plan import (
@@ -107,11 +107,7 @@ class Today:
 
     def save(self, path: str | Path) -> None:
         """Write a JSON file; raises InputError where it cannot be written."""
-        text = json.dumps(self.document(), indent=1, allow_nan=False)
-        try:
-            Path(path).write_text(text + "\n", encoding="utf-8")
-        except OSError as error:
-            raise InputError([Fault(str(path), f"cannot be written: {error.strerror}")]) from error
+        save_document(self.document(), path)
 
 
 def learn(
@@ -129,7 +125,7 @@ def learn(
     frame = in_time_order(frame)
     tuned = tune(frame, shop) if tuned is None else tuned
     followed = follow_log(frame, shop, tuned)
-    names, X = features_of(frame, _materials_of(frame))
+    names, X = features_of(frame, list(followed.materials))
     topped = top_up(followed, names, X)
     ids, times = frame["heat_id"].tolist(), frame["tapped_at"].astype(str).tolist()
     jumps = tuple(
@@ -235,16 +231,7 @@ def load_today(path: str | Path) -> Today:
 
     Raises InputError, one clear line, for a file that is missing, broken or of another kind.
     """
-    path = Path(path)
-    try:
-        if path.stat().st_size > LARGEST_FILE_BYTES:
-            raise InputError([Fault(str(path), "is too large for a file of offsets")])
-        document = json.loads(path.read_text(encoding="utf-8"))
-    except OSError as error:
-        raise InputError([Fault(str(path), f"cannot be read: {error.strerror}")]) from error
-    except (ValueError, RecursionError) as error:
-        raise InputError([Fault(str(path), f"is not JSON: {error}")]) from error
-    return today_from(document, str(path))
+    return today_from(load_document(path, "offsets"), str(path))
 
 
 def today_from(document: Any, place: str = "offsets") -> Today:
@@ -297,14 +284,6 @@ def drift_table(frame: pd.DataFrame, followed: Followed, drift: Any) -> pd.DataF
             )
         )
     return pd.concat(parts, ignore_index=True)
-
-
-def _materials_of(frame: pd.DataFrame) -> list[str]:
-    """Materials that a log has a column for."""
-    known = ("hot_metal_kg", "steel_kg")
-    return [
-        name[:-3] for name in map(str, frame.columns) if name.endswith("_kg") and name not in known
-    ]
 
 
 def _features(outcome: Outcome) -> tuple[list[str], Array]:

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import json
 from collections.abc import Mapping
 from dataclasses import asdict, dataclass, field
 from pathlib import Path
@@ -14,6 +13,7 @@ from converter_calc.balance.heats import HeatTable
 from converter_calc.balance.schema import material_fields, parameters
 from converter_calc.basis.dual import Array
 from converter_calc.basis.errors import Fault, InputError
+from converter_calc.learning.kept_files import load_document, save_document
 from converter_calc.learning.tuning_equations import GrossError
 from converter_calc.planning.solving import with_values
 
@@ -22,7 +22,6 @@ if TYPE_CHECKING:
 
 FORMAT = "converter-calc tuned parameters"
 VERSION = 1
-LARGEST_FILE_BYTES = 20_000_000
 _YIELD = "_yield_factor"
 
 
@@ -199,11 +198,7 @@ class Tuned:
 
     def save(self, path: str | Path) -> None:
         """Write a JSON file; raises InputError where it cannot be written."""
-        text = json.dumps(self.document(), indent=1, allow_nan=False)
-        try:
-            Path(path).write_text(text + "\n", encoding="utf-8")
-        except OSError as error:
-            raise InputError([Fault(str(path), f"cannot be written: {error.strerror}")]) from error
+        save_document(self.document(), path)
 
 
 def load_tuned(path: str | Path) -> Tuned:
@@ -211,16 +206,7 @@ def load_tuned(path: str | Path) -> Tuned:
 
     Raises InputError, one clear line, for a file that is missing, broken or of another kind.
     """
-    path = Path(path)
-    try:
-        if path.stat().st_size > LARGEST_FILE_BYTES:
-            raise InputError([Fault(str(path), "is too large for a file of tuned parameters")])
-        document = json.loads(path.read_text(encoding="utf-8"))
-    except OSError as error:
-        raise InputError([Fault(str(path), f"cannot be read: {error.strerror}")]) from error
-    except (ValueError, RecursionError) as error:
-        raise InputError([Fault(str(path), f"is not JSON: {error}")]) from error
-    return tuned_from(document, str(path))
+    return tuned_from(load_document(path, "tuned parameters"), str(path))
 
 
 def tuned_from(document: Any, place: str = "tuned") -> Tuned:
