@@ -37,8 +37,8 @@ class Followed:
 
     tuned : parameters they are offsets from. names : the m quantities of the log that were
     followed. materials : those that have a column. predicted : by the tuned model, transformed,
-    (n, m). residuals : observed less predicted. H : derivative by each offset, (n, m, k). drift : the offsets; in `Drift.offsets`
-    log offsets are shares.
+    (n, m). residuals : observed less predicted. H : derivative by each offset, (n, m, k).
+    drift : the offsets; in `Drift.offsets` log offsets are shares.
     """
 
     tuned: Tuned
